@@ -1,0 +1,1 @@
+"""Checked tables, the tree behind the names, and the only unit conversion."""

@@ -1,0 +1,1 @@
+"""AC power flow, limits and the first-violation search on plain arrays, per unit."""

@@ -1,0 +1,1 @@
+"""The relaxation, its conditions, its solver, and the proof that needs none."""

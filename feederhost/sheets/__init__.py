@@ -1,0 +1,1 @@
+"""Workbooks and csv folders: reading, writing, the blank template, charts."""

@@ -1,0 +1,1 @@
+"""One question an engineer asks, one module: tables in, tables out."""
