@@ -107,8 +107,8 @@ _VARS = _pick("vars", "absorb or inject reactive power (exports must say it belo
 
 def _line_constants() -> tuple[Column, ...]:
     return (
-        Column("r1", "positive-sequence resistance", units=IMPEDANCE, lowest=0, example=0.35),
-        Column("x1", "positive-sequence reactance", units=IMPEDANCE, lowest=0, example=0.40),
+        Column("r1", "positive-sequence resistance", units=IMPEDANCE, lowest=0, example=0.646),
+        Column("x1", "positive-sequence reactance", units=IMPEDANCE, lowest=0, example=0.49),
         Column("r0", "zero-sequence resistance", units=IMPEDANCE, lowest=0),
         Column("x0", "zero-sequence reactance", units=IMPEDANCE, lowest=0),
         Column("b1", "positive-sequence charging susceptance", units=SUSCEPTANCE, lowest=0),
@@ -130,7 +130,7 @@ def _phase_matrices() -> tuple[Column, ...]:
 
 _RATING = Column(
     "rating_a", "normal current rating; the word `unlimited` is legal",
-    unit="A", above=0, words=(UNLIMITED,), example=320,
+    unit="A", above=0, words=(UNLIMITED,), example=240,
 )  # fmt: skip
 
 INPUT: dict[str, Sheet] = {

@@ -79,12 +79,16 @@ class Settings:
         1e-12, "pu", "voltage step at which a sweep has settled", _METHOD
     )
     sweep_limit: int = _setting(500, "-", "most sweeps before 'no solution'", _METHOD)
+    tangent_tolerance: float = _setting(
+        1e-11, "-", "relative step at which the tangent of a sweep has settled", _METHOD
+    )
     mismatch_tolerance: float = _setting(
         1e-8, "pu", "largest power mismatch of a published operating point (1 MVA)", _METHOD
     )
     collapse_pu: float = _setting(
         0.1, "pu", "below this voltage a sweep counts as without solution", _METHOD
     )
+    runaway: float = _setting(1e12, "-", "slope at which a tangent counts as lost", _METHOD)
     tap_passes: int = _setting(50, "-", "most passes over all regulators for the taps", _METHOD)
     edge_tolerance: float = _setting(
         1e-9, "pu", "how closely a regulator is put on its band edge", _METHOD
@@ -92,16 +96,19 @@ class Settings:
 
     # First-violation search.
     search_step_share: float = _setting(
-        0.02, "-", "longest step of the search, as a share of the cap", _METHOD
+        0.05, "-", "longest step of the search, as a share of the cap", _METHOD
     )
     search_first_share: float = _setting(
         1e-4, "-", "shortest step of the search, as a share of the cap", _METHOD
+    )
+    search_overshoot: float = _setting(
+        1.2, "-", "how far a step reaches past the nearest tangent zero", _METHOD
     )
     search_tolerance: float = _setting(
         1e-10, "-", "relative width at which a first violation is located", _METHOD
     )
     search_refinements: int = _setting(
-        60, "-", "most halvings when a first violation is located", _METHOD
+        80, "-", "most halvings when a first violation is located", _METHOD
     )
     column_budget: int = _setting(
         2_000_000, "-", "complex numbers one sweep array may hold; more is cut in blocks", _METHOD
@@ -114,6 +121,9 @@ class Settings:
     price_floor: float = _setting(
         0.02, "-", "lowest loss price as a share of the branch resistance", _METHOD
     )
+    price_floor_share: float = _setting(
+        1e-3, "-", "least resistance in the price floor, as a share of the mean", _METHOD
+    )
     price_raises: int = _setting(
         40, "-", "most rounds of raising prices where a multiplier is negative", _METHOD
     )
@@ -121,6 +131,9 @@ class Settings:
         1e-8, "-", "largest stationarity or scale residual of a closed proof", _METHOD
     )
     recursion_limit: int = _setting(400, "-", "most sweeps of the multiplier recursion", _METHOD)
+    recursion_step: float = _setting(
+        1e-13, "-", "relative step at which the multiplier recursion has settled", _METHOD
+    )
     multiplier_tolerance: float = _setting(
         1e-9, "-", "most negative cone multiplier, as a share of the largest", _METHOD
     )
@@ -133,6 +146,9 @@ class Settings:
     )  # fmt: skip
     recovery_tolerance: float = _setting(
         1e-4, "pu", "largest voltage gap between a relaxed solution and its AC recovery", _METHOD
+    )
+    scale_floor: float = _setting(
+        1e-6, "-", "least power that is scaled to 1 for the solver, as a share of the cap", _METHOD
     )
     above_share: float = _setting(
         1e-4, "-", "how far above the value a violation must be seen (1.0001 x)", _METHOD
@@ -151,6 +167,9 @@ class Settings:
     )
     cap_loads: float = _setting(10.0, "-", "default search cap over peak load", _PROJECT)
     cap_least_kw: float = _setting(100.0, "kW", "least default search cap", _PROJECT)
+    zip_tolerance: float = _setting(
+        0.01, "-", "how far the zip shares of a load may sum from one", _PROJECT
+    )
     shared_kv: float = _setting(1.0, "kV", "nodes up to this are low voltage", "IEC 60038")
 
 

@@ -1,0 +1,165 @@
+"""What a person, or a machine, reads on the terminal."""
+
+from __future__ import annotations
+
+import json
+import math
+import sys
+import textwrap
+import time
+from typing import Any
+
+import click
+
+_WIDTH = 79
+_PATIENCE = 1.0  # seconds before a stage gets a progress bar
+
+
+class ProgressLine:
+    """A progress bar on standard error for any stage that takes longer than a second.
+
+    Silent when standard error is not a terminal.
+    """
+
+    def __init__(self, quiet: bool) -> None:
+        self.on = not quiet and sys.stderr.isatty()
+        self.stage = ""
+        self.since = 0.0
+        self.done = 0
+        self.bar: Any = None
+
+    def __enter__(self) -> ProgressLine:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self._close()
+
+    def __call__(self, stage: str, done: int, total: int) -> None:
+        """Take note that ``done`` of ``total`` steps of a stage are done."""
+        if not self.on:
+            return
+        now = time.monotonic()
+        if stage != self.stage:
+            self._close()
+            self.stage, self.since, self.done = stage, now, 0
+        if self.bar is None and now - self.since > _PATIENCE and done < total:
+            self.bar = click.progressbar(length=total, label=f"{stage:<22}", file=sys.stderr)
+            self.bar.__enter__()
+            self.done = 0
+        if self.bar is not None:
+            self.bar.update(done - self.done)
+            self.done = done
+
+    def _close(self) -> None:
+        if self.bar is not None:
+            self.bar.render_finish()
+            self.bar = None
+
+
+def as_json(value: object) -> str:
+    """Return strict JSON: blanks and numbers that are not finite become null."""
+    return json.dumps(_plain(value), indent=1, ensure_ascii=False, allow_nan=False)
+
+
+def _plain(value: Any) -> Any:
+    if isinstance(value, dict):
+        return {str(k): _plain(v) for k, v in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(v) for v in value]
+    if hasattr(value, "item"):
+        value = value.item()
+    if isinstance(value, float) and not math.isfinite(value):
+        return None
+    return value
+
+
+def host_lines(overview: dict[str, Any]) -> list[str]:
+    """Return the summary of a `host` run, at most 79 columns wide."""
+    lines = [*_title(overview), ""]
+    lines.append(f"{'':<10}{'rows':>6}  {'smallest kW':<22}{'median kW':>10}  largest kW")
+    for row in overview["technologies"]:
+        if "smallest_kw" in row:
+            low = f"{row['smallest_kw']:,.0f} at {row['smallest_at']}"
+            sign = ">= " if row["capped"] and row["largest_kw"] else ""
+            high = f"{row['largest_kw']:,.0f} at {row['largest_at']}"
+            lines.append(
+                f"{row['technology']:<10}{row['rows']:>6}  {low:<22}{row['median_kw']:>10,.0f}  "
+                f"{sign if _is_capped(overview, row) else ''}{high}"
+            )
+        else:
+            lines.append(f"{row['technology']:<10}{row['rows']:>6}  no value")
+        met = ", ".join(f"{name} {count}" for name, count in row["limits"].items() if name)
+        lines += textwrap.wrap(
+            f"first limits: {met}", _WIDTH, initial_indent=" " * 18, subsequent_indent=" " * 18
+        )
+    lines.append("")
+    lines.append("proof     " + _tally(overview["proof"]))
+    lines.append("state     " + _tally(overview["state"]))
+    lines += _warned(overview)
+    lines += _cautions(overview)
+    return lines
+
+
+def _is_capped(overview: dict[str, Any], row: dict[str, Any]) -> bool:
+    return any(
+        h["state"] == "capped" and h["technology"] == row["technology"]
+        and h["node"] == row["largest_at"]
+        for h in overview["hosting"]
+    )  # fmt: skip
+
+
+def check_lines(overview: dict[str, Any]) -> list[str]:
+    """Return the summary of a `check` run, at most 79 columns wide."""
+    lines = [*_title(overview), ""]
+    lines.append(f"{'case':<18}{'loss kW':>9}{'head kW':>10}  {'lowest pu':<17}{'highest pu':<17}")
+    for case in overview["base_cases"]:
+        low = f"{case['lowest_pu']:.4f} {_short(case['lowest_node'], 9)}"
+        high = f"{case['highest_pu']:.4f} {_short(case['highest_node'], 9)}"
+        lines.append(
+            f"{_short(case['case'], 17):<18}{case['loss_kw']:>9,.1f}{case['head_kw']:>10,.1f}  "
+            f"{low:<17}{high:<17}".rstrip()
+        )
+        if case["taps"]:
+            lines.append(f"{'':<18}taps: {_short(case['taps'], _WIDTH - 24)}")
+    lines.append("")
+    for row in overview["conditions"]:
+        margin = f" ({row['margin']:.4g})" if isinstance(row["margin"], float) else ""
+        lines += textwrap.wrap(
+            f"{row['holds']:<11}{row['condition']}{margin}", _WIDTH, subsequent_indent=" " * 11
+        )
+    shown = [f for f in overview["audit"] if f["severity"] == "warning"]
+    if shown:
+        lines.append("")
+    for f in shown:
+        place = " ".join(str(p) for p in (f["sheet"], f["row"] or "", f["column"]) if p)
+        text = f"warning {place}: {f['finding']}"
+        text += f" - {f['suggestion']}" if f["suggestion"] else ""
+        lines += textwrap.wrap(text, _WIDTH, subsequent_indent="    ")
+    return lines + _warned(overview)
+
+
+def _title(overview: dict[str, Any]) -> list[str]:
+    date = overview["data_date"] or "not given"
+    number = len(overview["cases"])
+    cases = f"{number} case" + ("s" if number != 1 else "")
+    text = f"{overview['feeder']}: {overview['nodes']} nodes, {cases}, data of {date}"
+    return textwrap.wrap(text, _WIDTH)
+
+
+def _tally(count: dict[str, int]) -> str:
+    return ", ".join(f"{name} {number}" for name, number in count.items())
+
+
+def _warned(overview: dict[str, Any]) -> list[str]:
+    return [f"audit     {overview['warnings']} warnings, {overview['notes']} notes"]
+
+
+def _cautions(overview: dict[str, Any]) -> list[str]:
+    lines = []
+    for text in overview["cautions"]:
+        lines += textwrap.wrap(f"caution   {text}", _WIDTH, subsequent_indent=" " * 10)
+    return lines
+
+
+def _short(text: str, width: int) -> str:
+    return text if len(text) <= width else text[: width - 1] + "~"
