@@ -79,6 +79,9 @@ class Settings:
         1e-12, "pu", "voltage step at which a sweep has settled", _METHOD
     )
     sweep_limit: int = _setting(500, "-", "most sweeps before 'no solution'", _METHOD)
+    sweep_review: int = _setting(
+        20, "-", "sweeps after which a column's rate of settling is judged", _METHOD
+    )
     tangent_tolerance: float = _setting(
         1e-11, "-", "relative step at which the tangent of a sweep has settled", _METHOD
     )
@@ -101,6 +104,10 @@ class Settings:
     search_first_share: float = _setting(
         1e-4, "-", "shortest step of the search, as a share of the cap", _METHOD
     )
+    search_lost_share: float = _setting(
+        0.01, "-", "how closely the loss of a solution is located once a limit has been met, "
+        "as a share of the cap", _METHOD,
+    )  # fmt: skip
     search_overshoot: float = _setting(
         1.2, "-", "how far a step reaches past the nearest tangent zero", _METHOD
     )
@@ -140,15 +147,15 @@ class Settings:
     solver_agreement: float = _setting(
         1e-4, "-", "largest relative gap between solver and AC value of a proven row", _METHOD
     )
+    solver_room: float = _setting(
+        10.0, "-", "cap of the priced programme over the AC value", _METHOD
+    )
     fictitious_loss_share: float = _setting(
         1e-4, "-", "fictitious loss, as a share of the rating, up to which a relaxed "
         "solution counts as tight", _METHOD,
     )  # fmt: skip
     recovery_tolerance: float = _setting(
         1e-4, "pu", "largest voltage gap between a relaxed solution and its AC recovery", _METHOD
-    )
-    scale_floor: float = _setting(
-        1e-6, "-", "least power that is scaled to 1 for the solver, as a share of the cap", _METHOD
     )
     above_share: float = _setting(
         1e-4, "-", "how far above the value a violation must be seen (1.0001 x)", _METHOD

@@ -75,7 +75,9 @@ def watch_limits(
         ends: list[tuple[dict[int, complex], float, str, str]] = []
         for s in feeder.series:
             a = s.y + 1j * s.b_half
-            ends += [({s.f: a / s.tap**2, s.t: -s.y / s.tap}, s.rated_f, s.kind, s.name),
+            # A terminal carries what flows through it, the no-load current of the core included.
+            ends += [({s.f: a / s.tap**2 + s.no_load, s.t: -s.y / s.tap}, s.rated_f, s.kind,
+                      s.name),
                      ({s.f: -s.y / s.tap, s.t: a}, s.rated_t, s.kind, s.name)]  # fmt: skip
         for k, link in enumerate(feeder.links):
             kind = "line" if link.kind == "switch" else link.kind

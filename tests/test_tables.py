@@ -12,7 +12,7 @@ import pandas as pd
 import pytest
 from feederhost.errors import Finding, Severity, fatal
 from feederhost.feeder.audit import audit
-from feederhost.feeder.names import near_index, nearest, within_one
+from feederhost.feeder.names import listed, near_index, nearest, within_one
 from feederhost.feeder.tables import Tables, check_tables
 from feederhost.feeder.topology import root_feeder
 from feederhost.schema import INPUT, NUMBER
@@ -344,7 +344,13 @@ def test_nearest_prefers_names_that_differ_by_case_and_names_at_most_three():
     assert nearest("n-7", index) == ["N-7"]
     assert nearest("n-1", index) == ["N-7", "N-8", "N-6"]
     assert nearest("Y", near_index(["S", "A"])) == []
+    assert nearest("cab", near_index(["abc"])) == []
     assert nearest("x" * 64 + "y", index) == []
+
+
+def test_long_lists_are_cut():
+    assert listed("abcdefgh") == "a, b, c, d, e, f, g, h"
+    assert listed("abcdefghij") == "a, b, c, d, e, f, g, h and 2 more"
 
 
 @given(st.text("abA", max_size=5), st.lists(st.text("abA", max_size=5), max_size=6, unique=True))

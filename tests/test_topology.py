@@ -324,6 +324,21 @@ def test_branch_on_phases_that_do_not_arrive():
     assert findings[1].finding == "no line brings phase C to node B"
 
 
+def test_branch_where_no_phase_arrives():
+    _, findings = rooted("L1 S A closed AB", "L2 A B closed C", "L3 B C closed A")
+    assert [f.suggestion for f in findings] == ["phases there: AB", "phases there: none"]
+
+
+def test_phases_that_no_line_gives_are_not_missed_on_a_balanced_feeder():
+    _, findings = rooted("L1 S A", loads=sheet("node, kw, phases", ["A", 1, "C"]))
+    assert findings == ()
+
+
+def test_unknown_nodes_have_no_phases_to_miss():
+    _, findings = rooted("L1 S A closed A", loads=sheet("node, kw, phases", ["X", 1, "C"]))
+    assert [f.column for f in findings] == ["node"]
+
+
 @pytest.mark.parametrize("name", list(CARRYING))
 def test_plant_on_phases_that_do_not_arrive(name):
     table = CARRYING[name].copy()

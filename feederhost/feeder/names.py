@@ -28,8 +28,6 @@ def within_one(first: str, second: str) -> bool:
     """
     if len(first) > len(second):
         first, second = second, first
-    if len(second) - len(first) > 1:
-        return False
     start = 0
     while start < len(first) and first[start] == second[start]:
         start += 1

@@ -142,33 +142,3 @@ def slack(limits: Limits, measured: Floats) -> Floats:
 def slack_change(limits: Limits, measured_change: Floats) -> Floats:
     """Differentiate :func:`slack`, (rows, m)."""
     return np.where(limits.upper, -1.0, 1.0)[:, None] * measured_change
-
-
-def relax_broken(limits: Limits, measured: Floats, allowance: Floats) -> tuple[Limits, np.ndarray]:
-    """Replace every bound that is broken already by ``allowance``.
-
-    Parameters
-    ----------
-    measured : (rows,) float
-        Measured with nothing added.
-    allowance : (rows,) float
-        Bound to use where the own bound is broken.
-
-    Returns
-    -------
-    limits, broken : Limits, (rows,) bool
-    """
-    own = slack(limits, measured[:, None])[:, 0]
-    broken = (own < 0) & (limits.criterion >= 0)
-    return (
-        Limits(
-            criterion=limits.criterion,
-            quantity=limits.quantity,
-            element=limits.element,
-            phase=limits.phase,
-            upper=limits.upper,
-            bound=np.where(broken, allowance, limits.bound),
-            bank_other=limits.bank_other,
-        ),
-        broken,
-    )

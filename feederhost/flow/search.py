@@ -135,7 +135,7 @@ def blocks(columns: int, rows: int, settings: Settings) -> Iterator[np.ndarray]:
 def first_violations(system: System, plants: Plants, settings: Settings) -> FirstViolations:
     """Find, for every plant and criterion, the first violation as the rating grows from zero.
 
-    The system must hold every limit at rating zero (see :func:`limits.relax_broken`).
+    The system must hold every limit at rating zero: what is broken there must be relaxed first.
     """
     m = plants.node.size
     rating = np.full((GROUPS, m), np.inf)
@@ -188,7 +188,7 @@ def _search_block(
         sure = np.flatnonzero(~unsure & solved)
         # Where the solution is lost matters to the last digit only if nothing came before it.
         first = np.isinf(rating[:, pick]).all(axis=0)
-        close = np.where(first, settings.search_tolerance, settings.search_first_share)
+        close = np.where(first, settings.search_tolerance, settings.search_lost_share)
         gone = np.flatnonzero(ceiling[live] - g[live] <= close * cap[live])
         rating[NO_SOLUTION, pick[gone]] = g[live[gone]]
         for c in present:
@@ -212,7 +212,7 @@ def _step(
     """Next step: a little past the nearest tangent zero, within the bounds of Settings."""
     falling = open_rows & (here.slope < 0)
     with np.errstate(divide="ignore", invalid="ignore"):
-        reach = np.where(falling, -here.slack / here.slope, np.inf).min(axis=0)
+        reach = np.where(falling, -here.slack / here.slope, np.inf).min(axis=0, initial=np.inf)
     reach = np.maximum(settings.search_overshoot * reach, settings.search_first_share * cap)
     return np.minimum(np.minimum(reach, step), settings.search_step_share * cap)
 

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from feederhost.flow.network import Loading, Network, OperatingPoint
-from feederhost.flow.tree import Complexes, path_sum, subtree_sum
+from feederhost.flow.tree import Complexes, Floats, path_sum, subtree_sum
 from feederhost.settings import Settings
 
 
@@ -74,7 +74,8 @@ def sweep(
     J = np.zeros(shape, dtype=complex)
     mismatch = np.full(m, np.inf)
     todo = np.arange(m)
-    for _ in range(settings.sweep_limit):
+    earlier = np.full(m, np.inf)
+    for count in range(1, settings.sweep_limit + 1):
         if todo.size == 0:
             break
         s, c, y = _pick(S, todo), _pick(loading.current, todo), _pick(shunt, todo)
@@ -84,6 +85,9 @@ def sweep(
         after = _pick(loading.source, todo)[None] - path_sum(network.tree, _drop(network, flow))
         step = np.abs(after - before).max(axis=(0, 1))
         lost = ~np.isfinite(step) | (np.abs(after).min(axis=(0, 1)) < settings.collapse_pu)
+        if count % settings.sweep_review == 0:
+            lost |= _hopeless(step, earlier[todo], settings.sweep_limit - count, settings)
+            earlier[todo] = step
         done = (step < settings.sweep_tolerance) & ~lost
         V[..., todo] = after
         J[..., todo] = flow
@@ -96,6 +100,14 @@ def sweep(
             mismatch[todo[settled]] = gap.max(axis=(0, 1))
         todo = todo[~(done | lost)]
     return OperatingPoint(V, J, mismatch)
+
+
+def _hopeless(step: Floats, earlier: Floats, left: int, settings: Settings) -> np.ndarray:
+    """Columns that, at the rate of their last sweeps, will not settle in those that are left."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        rate = np.log(step / earlier) / settings.sweep_review
+        wanted = np.log(settings.sweep_tolerance / step) / rate
+    return (earlier < np.inf) & ((rate >= 0) | (wanted > left))
 
 
 def tangent(
@@ -126,27 +138,24 @@ def tangent(
     # d(|V|/V) = Re(conj(V) dV)/(|V| V) - |V| dV/V^2
     bent = -(power + loading.current * size) * inverse**2
     along = loading.current * inverse / size
-    constant_current = bool(np.any(loading.current))
-    dV = np.zeros_like(V)
-    dJ = np.zeros_like(V)
-    step = np.full(V.shape[-1], np.inf)
+    dV, dJ = np.zeros_like(V), np.zeros_like(V)
+    todo = np.flatnonzero(point.solved)
     for _ in range(settings.sweep_limit):
-        # A column that has run away is set aside: its slope is not a number, never a guess.
-        dV[..., ~(np.abs(dV).max(axis=(0, 1)) < settings.runaway)] = np.nan
-        inner = forced + bent * dV
-        if constant_current:
-            inner = inner + along * np.real(np.conj(V) * dV)
-        drawn = np.conj(inner) + shunt * dV
-        dJ = subtree_sum(network.tree, drawn)
-        after = -path_sum(network.tree, _drop(network, dJ))
-        step = np.abs(after - dV).max(axis=(0, 1))
-        scale = np.abs(after).max(axis=(0, 1))
-        dV = after
-        unsettled = step > settings.tangent_tolerance * np.maximum(scale, settings.sweep_tolerance)
-        if not np.any(unsettled & np.isfinite(step) & point.solved):
+        if todo.size == 0:
             break
-    bad = ~point.solved | ~np.isfinite(step)
-    if bad.any():
-        dV[..., bad] = np.nan
-        dJ[..., bad] = np.nan
+        moved = dV[..., todo]
+        inner = forced[..., todo] + bent[..., todo] * moved
+        inner += along[..., todo] * np.real(np.conj(V[..., todo]) * moved)
+        flow = subtree_sum(network.tree, np.conj(inner) + _pick(shunt, todo) * moved)
+        after = -path_sum(network.tree, _drop(network, flow))
+        step = np.abs(after - moved).max(axis=(0, 1))
+        scale = np.abs(after).max(axis=(0, 1))
+        dV[..., todo], dJ[..., todo] = after, flow
+        todo = todo[(step > settings.tangent_tolerance * scale) & (scale < settings.runaway)]
+    # A slope that has not settled is not a number, never a guess.
+    unsettled = np.concatenate([todo, np.flatnonzero(~point.solved)])
+    ran_away = np.flatnonzero(~(np.abs(dV).max(axis=(0, 1)) < settings.runaway))
+    for lost in (unsettled, ran_away):
+        dV[..., lost] = np.nan
+        dJ[..., lost] = np.nan
     return Tangent(dV, dJ)

@@ -35,13 +35,12 @@ def upper_bound(
     """
     zero = np.zeros(flow.tree.size)
     low, high = rating, cap
-    scale = max(rating, settings.scale_floor * cap)
     for _ in range(settings.bound_rounds):
         if high - rating <= settings.solver_agreement * high:
             break
         low = (rating + high) / 2
         cuts = flow_ranges(system, flow, seek, column, low, high)
-        found = solve_row(programme, system, flow, seek, column, zero, high, scale, solver, cuts)
+        found = solve_row(programme, system, flow, seek, column, zero, rating, high, solver, cuts)
         if found.answer.status is Status.INFEASIBLE:
             high = low
         elif np.isfinite(found.g) and found.g < high * (1 - settings.solver_agreement):

@@ -8,8 +8,12 @@
     v_min <= v <= v_max, terminal currents, head and bank power within their limits
 
 Baran & Wu 1989 (DistFlow); Farivar & Low 2013 (relaxation).  With every w zero it is the plain
-programme.  The programme is compiled once per feeder and re-valued row by row; numbers are
-scaled to the plant's own size before they reach the solver.
+programme.  It is compiled once per feeder and re-valued row by row.
+
+A plant of 10 kW on a feeder of 10 MW would drown in a solver's tolerance.  So the variables are
+deviations from an origin (the AC point), in units of the plant's own effect: an exact change of
+variables that leaves the optimum where it is.  What the origin lacks to satisfy an equation
+enters as its residual, so nothing rests on the origin being a solution.
 """
 
 from __future__ import annotations
@@ -21,9 +25,11 @@ import numpy as np
 import scipy.sparse as sp
 
 from feederhost.flow.limits import Limits, Quantity, System
-from feederhost.flow.tree import Floats, Tree
+from feederhost.flow.tree import Floats, Tree, path
 from feederhost.proof.branchflow import BranchFlow, Seek
 from feederhost.proof.solver import Answer, Status, solve
+
+Values = dict[str, Floats | float]
 
 
 @dataclass(frozen=True)
@@ -77,7 +83,26 @@ class Programme:
     parameters: dict[str, cp.Parameter]
     variables: dict[str, cp.Variable]
     cones: cp.SOC
-    branches_rated: dict[Quantity, np.ndarray]
+    rated: dict[Quantity, np.ndarray]
+
+
+@dataclass(frozen=True)
+class Origin:
+    """Where one row's deviations start, and their units: x = origin + unit * deviation.
+
+    ``rating``, ``power`` and ``volt`` are the units of g, of P, Q (squared: of ell) and of v;
+    the power unit is each branch's own, (n,).
+    """
+
+    g: float
+    P: Floats
+    Q: Floats
+    ell: Floats
+    v: Floats
+    v_pi: Floats
+    rating: float
+    power: Floats
+    volt: float
 
 
 def structure(system: System, *, cuts: bool = False) -> tuple[object, ...]:
@@ -94,64 +119,74 @@ def structure(system: System, *, cuts: bool = False) -> tuple[object, ...]:
 
 
 def compile_programme(system: System, *, cuts: bool = False) -> Programme:
-    """Write the programme for systems of one structure (see the module's first lines)."""
+    """Write the programme for systems of one structure (see the module's first lines).
+
+    Every symbol stands for its deviation from the origin; ``_0`` marks the origin itself and
+    ``res_`` its residuals.
+    """
     tree, limits = system.network.tree, system.limits
     N = tree.size - 1
-    children, parents, from_source = _incidence(tree)
+    children, from_source = _incidence(tree)
     par: dict[str, cp.Parameter] = {}
 
     def given(name: str, size: int = N, **kind: bool) -> cp.Parameter:
         par[name] = cp.Parameter(size, name=name, **kind)
         return par[name]
 
-    P, Q, v = cp.Variable(N), cp.Variable(N), cp.Variable(N)
-    ell, g = cp.Variable(N, nonneg=True), cp.Variable(1, nonneg=True)
-    r, x, z2 = given("r"), given("x"), given("z2")
-    # The held voltage is a variable so that no two parameters meet in a product (DPP).
-    v_0 = cp.Variable(1)
-    v_pi = parents @ v + from_source.T @ v_0
+    P, Q, ell, v = (cp.Variable(N) for _ in range(4))
+    g = cp.Variable(1)
+    v_pi = children.T @ v
+    # Powers of children in the unit of their parent.
+    scaled = given("ratio")
     balance = [
-        P == cp.multiply(r, ell) + given("p") + given("d") * g
-        + cp.multiply(given("G"), v) + children @ P,
-        Q == cp.multiply(x, ell) + given("q") + given("e") * g
-        - cp.multiply(given("B"), v) + children @ Q,
-        v == v_pi - 2 * (cp.multiply(r, P) + cp.multiply(x, Q)) + cp.multiply(z2, ell),
+        P == cp.multiply(given("r"), ell) + given("d") * g + cp.multiply(given("G"), v)
+        + children @ cp.multiply(scaled, P) + given("res_P"),
+        Q == cp.multiply(given("x"), ell) + given("e") * g - cp.multiply(given("B"), v)
+        + children @ cp.multiply(scaled, Q) + given("res_Q"),
+        v == v_pi - 2 * (cp.multiply(given("r_v"), P) + cp.multiply(given("x_v"), Q))
+        + cp.multiply(given("z2_v"), ell) + given("res_v"),
     ]  # fmt: skip
-    cones = cp.SOC(ell + v_pi, cp.vstack([2 * P, 2 * Q, ell - v_pi]), axis=0)
-    within = [
-        v_0 == given("source", 1),
-        given("v_min") <= v,
-        v <= given("v_max"),
-        g <= given("cap", 1),
-    ]
+    squared_voltage = given("volt", 1) * v_pi + given("v_pi_0")
+    squared_current = ell + given("ell_0")
+    flow = [2 * (P + given("P_0")), 2 * (Q + given("Q_0"))]
+    cones = cp.SOC(
+        squared_current + squared_voltage,
+        cp.vstack([*flow, squared_current - squared_voltage]),
+        axis=0,
+    )
+    within = [given("v_min") <= v, v <= given("v_max"), -1 <= g, g <= given("cap", 1)]
     rated: dict[Quantity, np.ndarray] = {}
-    for end, sign, voltage in (
-        (Quantity.CURRENT_FROM, 1.0, v_pi),
-        (Quantity.CURRENT_TO, -1.0, v),
-    ):
+    for end, voltage in ((Quantity.CURRENT_FROM, v_pi), (Quantity.CURRENT_TO, v)):
         k = limits.element[_real(limits) & (limits.quantity == end)] - 1
         rated[end] = k
         if k.size:
             name = end.name.lower()
             within.append(
                 cp.multiply(given(f"{name}_ell", k.size), ell[k])
-                + cp.multiply(given(f"{name}_y2", k.size), voltage[k])
-                + sign * 2 * cp.multiply(given(f"{name}_g", k.size), P[k])
-                - sign * 2 * cp.multiply(given(f"{name}_b", k.size), Q[k])
-                <= given(f"{name}_max", k.size)
+                + cp.multiply(given(f"{name}_v", k.size), voltage[k])
+                + cp.multiply(given(f"{name}_P", k.size), P[k])
+                + cp.multiply(given(f"{name}_Q", k.size), Q[k])
+                <= given(f"{name}_room", k.size)
             )
-    head_p = from_source @ P + given("head_p", 1)
-    head_q = from_source @ Q + given("head_q", 1)
+    head = given("head_unit")
+    head_P, head_Q = (from_source @ cp.multiply(head, power) for power in (P, Q))
     kinds = _head_kinds(limits)
     if (Quantity.HEAD_POWER, True) in kinds:
-        within.append(head_p <= given("import_max", 1))
+        within.append(head_P <= given("import_room", 1))
     if (Quantity.HEAD_POWER, False) in kinds:
-        within.append(-head_p <= given("export_max", 1))
+        within.append(-head_P <= given("export_room", 1))
     if (Quantity.BANK_POWER, True) in kinds:
-        bank = cp.vstack([head_p + given("other_p", 1), head_q + given("other_q", 1)])
+        bank = cp.vstack([head_P + given("bank_P_0", 1), head_Q + given("bank_Q_0", 1)])
         within.append(cp.SOC(given("bank_max", 1), bank, axis=0))
     if cuts:
-        within += _cut_constraints(given, g, P, Q, ell, v_pi)
+        within += [
+            cp.multiply(given("secant_ell"), ell) + cp.multiply(given("secant_v"), v_pi)
+            <= cp.multiply(given("secant_P"), P) + cp.multiply(given("secant_Q"), Q)
+            + given("secant_room"),
+            cp.multiply(given("hull_v"), v_pi) + cp.multiply(given("hull_ell"), ell)
+            <= given("hull_room"),
+            ell <= given("ell_room"), given("g_low", 1) <= g,
+        ]  # fmt: skip
     objective = cp.Maximize(cp.sum(g) - given("w", nonneg=True) @ ell)
     problem = cp.Problem(objective, [*balance, cones, *within])
     variables = {"g": g, "P": P, "Q": Q, "ell": ell, "v": v}
@@ -165,8 +200,8 @@ def solve_row(
     seek: Seek,
     column: int,
     w: Floats,
+    rating: float,
     cap: float,
-    scale: float,
     solver: str,
     cuts: Cuts | None = None,
 ) -> Relaxed:
@@ -175,31 +210,35 @@ def solve_row(
     Parameters
     ----------
     flow, seek, column : BranchFlow, Seek, int
-        The row's data; of the AC point only the tangent of constant-current load is used.
+        The row's data; its AC point is the origin of the variables.
     w : (n,) float
         Loss prices; zeros give the plain programme.
-    cap, scale : float
-        Largest rating allowed; power that is made 1 before the numbers reach the solver.
+    rating, cap : float
+        Rating at the origin, which is also its unit; largest rating allowed.
     """
-    _fill(programme, system, flow, seek, column, w, cap, scale)
+    origin = _origin(flow, seek, column, rating)
+    values = _network_values(flow, seek, column, origin)
+    values |= _limit_values(programme, system, flow, column, origin, cap)
+    values["w"] = (w * origin.power**2 / origin.rating)[1:]
     if cuts is not None:
-        _fill_cuts(programme.parameters, cuts, scale)
+        values |= _cut_values(cuts, origin)
+    for name, parameter in programme.parameters.items():
+        parameter.value = np.atleast_1d(values[name])
     answer = solve(programme.problem, solver)
-    return _unscale(programme, flow, column, scale, answer)
+    return _solution(programme, flow, origin, answer)
 
 
-def _incidence(tree: Tree) -> tuple[sp.csr_matrix, sp.csr_matrix, sp.csr_matrix]:
-    """Matrices over branches: sum over children, voltage of the parent, branches at the source."""
+def _incidence(tree: Tree) -> tuple[sp.csr_matrix, sp.csr_matrix]:
+    """Matrices over branches: sum over children, and sum over branches at the source."""
     N = tree.size - 1
     parent = tree.parent[1:]
     inner = np.flatnonzero(parent > 0)
     ones = np.ones(inner.size)
     children = sp.csr_matrix((ones, (parent[inner] - 1, inner)), shape=(N, N))
-    at_source = np.flatnonzero(parent == 0)
-    from_source = sp.csr_matrix(
-        (np.ones(at_source.size), (np.zeros(at_source.size, int), at_source)), shape=(1, N)
-    )
-    return children, children.T.tocsr(), from_source
+    first = np.flatnonzero(parent == 0)
+    row = np.zeros(first.size, dtype=int)
+    from_source = sp.csr_matrix((np.ones(first.size), (row, first)), shape=(1, N))
+    return children, from_source
 
 
 def _real(limits: Limits) -> np.ndarray:
@@ -212,9 +251,140 @@ def _head_kinds(limits: Limits) -> set[tuple[Quantity, bool]]:
     return {(Quantity(int(limits.quantity[i])), bool(limits.upper[i])) for i in rows}
 
 
-def _bounds(limits: Limits, n: int) -> tuple[Floats, Floats]:
-    v_min, v_max = np.zeros(n), np.full(n, np.inf)
-    for i in np.flatnonzero(limits.quantity == Quantity.VOLTAGE):
+def _origin(flow: BranchFlow, seek: Seek, column: int, rating: float) -> Origin:
+    P, Q, v = flow.P[:, column], flow.Q[:, column], flow.v[:, column]
+    draw = seek.draw[column]
+    unit = max(rating, np.finfo(float).tiny)
+    on_path = path(flow.tree, int(seek.node[column]))
+    power = np.hypot(P, Q)
+    power[on_path] = np.maximum(power[on_path], unit * abs(draw))
+    power = np.maximum(power, _LEAST_POWER * power.max())
+    # What the plant does to the squared voltage at its node, losses aside.
+    effect = 2 * (flow.r[on_path] * abs(draw.real) + flow.x[on_path] * abs(draw.imag)).sum() * unit
+    volt = float(effect) if effect > 0 else 1.0
+    own = (P, Q, flow.ell[:, column], v, flow.v_pi[:, column])
+    return Origin(rating, *own, rating=unit, power=power, volt=volt)
+
+
+def _network_values(flow: BranchFlow, seek: Seek, column: int, o: Origin) -> Values:
+    """Parameters of the equations and of the cones; powers in units of ``o.power``."""
+    parent = flow.tree.parent
+    s, j, draw = o.power, int(seek.node[column]), seek.draw[column]
+    r, x, G, B = flow.r[:, 0], flow.x[:, 0], flow.G[:, column], flow.B[:, column]
+    z2 = r**2 + x**2
+    at_plant = np.zeros(flow.tree.size, complex)
+    at_plant[j] = draw
+    below_P, below_Q = np.zeros_like(r), np.zeros_like(r)
+    np.add.at(below_P, parent[1:], o.P[1:])
+    np.add.at(below_Q, parent[1:], o.Q[1:])
+    res_P = r * o.ell + flow.p[:, column] + at_plant.real * o.g + G * o.v + below_P - o.P
+    res_Q = x * o.ell + flow.q[:, column] + at_plant.imag * o.g - B * o.v + below_Q - o.Q
+    res_v = o.v_pi - 2 * (r * o.P + x * o.Q) + z2 * o.ell - o.v
+    values: Values = {
+        "r": r * s, "x": x * s, "d": at_plant.real * o.rating / s,
+        "e": at_plant.imag * o.rating / s, "G": G * o.volt / s, "B": B * o.volt / s,
+        "r_v": r * s / o.volt, "x_v": x * s / o.volt, "z2_v": z2 * s**2 / o.volt,
+        "res_P": res_P / s, "res_Q": res_Q / s, "res_v": res_v / o.volt,
+        "ratio": np.where(parent > 0, s / s[np.maximum(parent, 0)], 0.0),
+        "v_pi_0": o.v_pi, "ell_0": o.ell / s**2, "P_0": o.P / s, "Q_0": o.Q / s,
+    }  # fmt: skip
+    return {name: np.asarray(value)[1:] for name, value in values.items()} | {"volt": o.volt}
+
+
+def _limit_values(
+    programme: Programme, system: System, flow: BranchFlow, column: int, o: Origin, cap: float
+) -> Values:
+    """Parameters of the limits: the room between the origin and each bound."""
+    limits, s, whole = system.limits, o.power, float(o.power.max())
+    v_min, v_max = voltage_bounds(limits, flow.tree.size)
+    values: Values = {
+        "v_min": (v_min - o.v)[1:] / o.volt, "v_max": (v_max - o.v)[1:] / o.volt,
+        "cap": (cap - o.g) / o.rating, "head_unit": s[1:] / whole,
+    }  # fmt: skip
+    for end, below in programme.rated.items():
+        k, name = below + 1, end.name.lower()
+        rows = _real(limits) & (limits.quantity == end)
+        sending = end is Quantity.CURRENT_FROM
+        y = (flow.y_from if sending else flow.y_to)[k, 0]
+        sign = 1.0 if sending else -1.0
+        voltage = (o.v_pi if sending else o.v)[k]
+        own = np.ones(k.size)
+        if not sending:
+            own += 2 * (y.real * flow.r[k, 0] - y.imag * flow.x[k, 0])
+        P, Q, v = sign * 2 * y.real, -sign * 2 * y.imag, np.abs(y) ** 2
+        there = own * o.ell[k] + v * voltage + P * o.P[k] + Q * o.Q[k]
+        values |= {
+            f"{name}_ell": own, f"{name}_v": v * o.volt / s[k] ** 2, f"{name}_P": P / s[k],
+            f"{name}_Q": Q / s[k], f"{name}_room": (limits.bound[rows] - there) / s[k] ** 2,
+        }  # fmt: skip
+    head = complex(flow.head[column])
+    for i in np.flatnonzero(_real(limits) & (limits.quantity >= Quantity.HEAD_POWER)):
+        bound = float(limits.bound[i])
+        if limits.quantity[i] == Quantity.BANK_POWER:
+            total = head + limits.bank_other
+            values |= {
+                "bank_max": np.sqrt(bound) / whole, "bank_P_0": total.real / whole,
+                "bank_Q_0": total.imag / whole,
+            }  # fmt: skip
+        elif limits.upper[i]:
+            values["import_room"] = (bound - head.real) / whole
+        else:
+            values["export_room"] = (head.real - bound) / whole
+    return values
+
+
+def _cut_values(cuts: Cuts, o: Origin) -> Values:
+    """Secant and hull cuts over ranges that every AC point with g in [low, high] obeys.
+
+    From ell v_pi = P^2 + Q^2: the product is above its McCormick plane, the squares are below
+    their secants.  Hull cut: v_pi + v_lo v_hi / v_pi <= v_lo + v_hi (Li & Vittal 2017).
+    """
+    s = o.power[1:]
+    P, Q, ell, v = cuts.P[1:], cuts.Q[1:], cuts.ell[1:], cuts.v[1:]
+    P_0, Q_0, ell_0, v_0 = o.P[1:], o.Q[1:], o.ell[1:], o.v_pi[1:]
+    secant_room = (
+        P.sum(axis=1) * P_0 + Q.sum(axis=1) * Q_0 + ell[:, 0] * v[:, 0] - P.prod(axis=1)
+        - Q.prod(axis=1) - v[:, 0] * ell_0 - ell[:, 0] * v_0
+    )  # fmt: skip
+    s2 = np.max(P**2, axis=1) + np.max(Q**2, axis=1)
+    hull_room = s2 * v.sum(axis=1) - s2 * v_0 - v.prod(axis=1) * ell_0
+    return {
+        "secant_ell": v[:, 0], "secant_v": ell[:, 0] * o.volt / s**2,
+        "secant_P": P.sum(axis=1) / s, "secant_Q": Q.sum(axis=1) / s,
+        "secant_room": secant_room / s**2,
+        "hull_v": s2 * o.volt / s**2, "hull_ell": v.prod(axis=1), "hull_room": hull_room / s**2,
+        "ell_room": (ell[:, 1] - ell_0) / s**2, "g_low": (cuts.low - o.g) / o.rating,
+    }  # fmt: skip
+
+
+def _solution(programme: Programme, flow: BranchFlow, o: Origin, answer: Answer) -> Relaxed:
+    n = flow.tree.size
+    if answer.status not in (Status.CLEAN, Status.INACCURATE):
+        none = np.full(n, np.nan)
+        return Relaxed(np.nan, none, none, none, none, none, np.nan, answer)
+    var = programme.variables
+
+    def full(name: str, origin: Floats, unit: Floats | float) -> Floats:
+        moved = np.concatenate([[0.0], np.asarray(var[name].value)]) * unit
+        return np.where(np.arange(n) > 0, origin + moved, moved)
+
+    P, Q = full("P", o.P, o.power), full("Q", o.Q, o.power)
+    ell, v = full("ell", o.ell, o.power**2), full("v", o.v, o.volt)
+    v[0] = o.v[0]
+    v_pi = v[np.maximum(flow.tree.parent, 0)]
+    loss_gap = float((flow.r[:, 0] * (ell - (P**2 + Q**2) / v_pi))[1:].sum())
+    g = o.g + float(np.ravel(np.asarray(var["g"].value))[0]) * o.rating
+    # Stationarity in ell: T_k v_pi is the sum of the cone's dual entries that hold ell.
+    first, rest = programme.cones.dual_value
+    held = np.ravel(np.asarray(first)) + np.asarray(rest).reshape(-1, n - 1)[-1]
+    cone = np.concatenate([[0.0], held / v_pi[1:] * o.rating / o.power[1:] ** 2])
+    return Relaxed(g, P, Q, ell, v, cone, loss_gap, answer)
+
+
+def voltage_bounds(limits: Limits, n: int) -> tuple[Floats, Floats]:
+    """Squared voltage bounds per node; where there is none, bounds that never bind."""
+    v_min, v_max = np.zeros(n), np.full(n, _NEVER_REACHED)
+    for i in np.flatnonzero(_real(limits) & (limits.quantity == Quantity.VOLTAGE)):
         k = limits.element[i]
         if limits.upper[i]:
             v_max[k] = min(v_max[k], limits.bound[i])
@@ -223,119 +393,7 @@ def _bounds(limits: Limits, n: int) -> tuple[Floats, Floats]:
     return v_min, v_max
 
 
-# A bound this far out never binds (squared pu); the solvers take no infinite numbers.
-_FREE = 100.0
-
-
-def _fill(
-    programme: Programme,
-    system: System,
-    flow: BranchFlow,
-    seek: Seek,
-    column: int,
-    w: Floats,
-    cap: float,
-    s: float,
-) -> None:
-    """Set the parameters, with power in units of ``s`` (so z * s, y / s, ell / s^2)."""
-    tree, limits, j = flow.tree, system.limits, int(seek.node[column])
-    draw = seek.draw[column]
-    at_plant = np.zeros(tree.size)
-    at_plant[j] = 1.0
-    z2 = flow.r**2 + flow.x**2
-    v_min, v_max = _bounds(limits, tree.size)
-    own = flow.p[0, column] + flow.G[0, column] * flow.v[0, column]
-    own_q = flow.q[0, column] - flow.B[0, column] * flow.v[0, column]
-    values: dict[str, Floats | float] = {
-        "r": flow.r[1:, 0] * s, "x": flow.x[1:, 0] * s, "z2": z2[1:, 0] * s**2,
-        "p": flow.p[1:, column] / s, "q": flow.q[1:, column] / s,
-        "G": flow.G[1:, column] / s, "B": flow.B[1:, column] / s,
-        "d": at_plant[1:] * draw.real, "e": at_plant[1:] * draw.imag,
-        "source": float(flow.v[0, column]), "v_min": v_min[1:],
-        "v_max": np.minimum(v_max, _FREE)[1:],
-        "cap": cap / s, "w": w[1:] * s, "head_p": own / s, "head_q": own_q / s,
-    }  # fmt: skip
-    for end, k in programme.branches_rated.items():
-        name = end.name.lower()
-        rows = _real(limits) & (limits.quantity == end)
-        y = (flow.y_from if end is Quantity.CURRENT_FROM else flow.y_to)[k + 1, 0]
-        own_ell = np.ones(k.size)
-        if end is Quantity.CURRENT_TO:
-            own_ell += 2 * (y.real * flow.r[k + 1, 0] - y.imag * flow.x[k + 1, 0])
-        values |= {
-            f"{name}_ell": own_ell, f"{name}_y2": np.abs(y) ** 2 / s**2, f"{name}_g": y.real / s,
-            f"{name}_b": y.imag / s, f"{name}_max": limits.bound[rows] / s**2,
-        }  # fmt: skip
-    for i in np.flatnonzero(_real(limits) & (limits.quantity >= Quantity.HEAD_POWER)):
-        bound = float(limits.bound[i])
-        if limits.quantity[i] == Quantity.BANK_POWER:
-            values |= {
-                "bank_max": np.sqrt(bound) / s, "other_p": limits.bank_other.real / s,
-                "other_q": limits.bank_other.imag / s,
-            }  # fmt: skip
-        elif limits.upper[i]:
-            values["import_max"] = bound / s
-        else:
-            values["export_max"] = -bound / s
-    for name, value in values.items():
-        if name in programme.parameters:
-            programme.parameters[name].value = np.atleast_1d(value)
-
-
-def _cut_constraints(given, g, P, Q, ell, v_pi) -> list[cp.Constraint]:  # type: ignore[no-untyped-def]
-    """Secant and hull cuts over ranges that every AC point with g in [low, high] obeys.
-
-    From ell v_pi = P^2 + Q^2: the product is above its McCormick plane, the squares are below
-    their secants.  Hull cut: v_pi + v_lo v_hi / v_pi <= v_lo + v_hi (Li & Vittal 2017).
-    """
-    secant = (
-        cp.multiply(given("cut_v_lo"), ell) + cp.multiply(given("cut_ell_lo"), v_pi)
-        <= cp.multiply(given("cut_P"), P) + cp.multiply(given("cut_Q"), Q) + given("cut_free")
-    )  # fmt: skip
-    hull = (
-        cp.multiply(given("cut_s2"), v_pi) + cp.multiply(given("cut_vv"), ell)
-        <= given("cut_s2v")
-    )  # fmt: skip
-    return [secant, hull, ell <= given("cut_ell_hi"), given("cut_g_lo", 1) <= g]
-
-
-def _fill_cuts(parameters: dict[str, cp.Parameter], cuts: Cuts, s: float) -> None:
-    P, Q, ell, v = cuts.P[1:] / s, cuts.Q[1:] / s, cuts.ell[1:] / s**2, cuts.v[1:]
-    s2 = np.max(P**2, axis=1) + np.max(Q**2, axis=1)
-    # The hull cut is divided by the largest squared power so that its numbers stay near 1.
-    size = np.maximum(s2, np.finfo(float).tiny)
-    values = {
-        "cut_v_lo": v[:, 0], "cut_ell_lo": ell[:, 0], "cut_ell_hi": ell[:, 1],
-        "cut_P": P.sum(axis=1), "cut_Q": Q.sum(axis=1),
-        "cut_free": ell[:, 0] * v[:, 0] - P.prod(axis=1) - Q.prod(axis=1),
-        "cut_s2": s2 / size, "cut_vv": v.prod(axis=1) / size, "cut_s2v": v.sum(axis=1) * s2 / size,
-        "cut_g_lo": np.atleast_1d(cuts.low / s),
-    }  # fmt: skip
-    for name, value in values.items():
-        parameters[name].value = value
-
-
-def _unscale(
-    programme: Programme, flow: BranchFlow, column: int, s: float, answer: Answer
-) -> Relaxed:
-    n = flow.tree.size
-    if answer.status not in (Status.CLEAN, Status.INACCURATE):
-        none = np.full(n, np.nan)
-        return Relaxed(np.nan, none, none, none, none, none, np.nan, answer)
-    var = programme.variables
-
-    def full(name: str, factor: float, first: float = 0.0) -> Floats:
-        return np.concatenate([[first], np.asarray(var[name].value) * factor])
-
-    P, Q, ell = full("P", s), full("Q", s), full("ell", s**2)
-    v = full("v", 1.0, float(flow.v[0, column]))
-    v_pi = v[np.maximum(flow.tree.parent, 0)]
-    loss_gap = float((flow.r[:, 0] * (ell - (P**2 + Q**2) / v_pi))[1:].sum())
-    # The cone's dual (a, b): its T follows from the ell - v_pi and ell + v_pi entries.
-    a, b = programme.cones.dual_value
-    a, b = np.ravel(np.asarray(a)), np.asarray(b).reshape(-1, n - 1)
-    # min -g in units of s: T_scaled = (a + b_last) / v_pi scaled; see the stationarity of ell.
-    cone = np.concatenate([[0.0], (a + b[-1]) / v_pi[1:] / s])
-    return Relaxed(
-        float(np.ravel(np.asarray(var["g"].value))[0]) * s, P, Q, ell, v, cone, loss_gap, answer
-    )
+# Least power unit of a branch, as a share of the largest: an idle branch still needs one.
+_LEAST_POWER = 0.001
+# Squared per unit: the solvers take no infinite numbers.
+_NEVER_REACHED = 4.0

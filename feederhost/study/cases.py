@@ -2,17 +2,17 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from feederhost.errors import NoSolutionError
 from feederhost.feeder.model import EXPORT, IMPORT, Case, Feeder, Generators, Technology
-from feederhost.flow.limits import Limits, Quantity, System, measure, relax_broken
+from feederhost.flow.limits import Limits, Quantity, System, measure, slack
 from feederhost.flow.network import Loading, OperatingPoint, behind, behind_loading
 from feederhost.flow.search import WATCHED
 from feederhost.flow.sweep import sweep
-from feederhost.flow.taps import Solved, find_taps, hold_at_edge
+from feederhost.flow.taps import Solved, find_taps, hold_at_edge, solve_at
 from feederhost.flow.tree import Complexes, Floats
 from feederhost.schema import LIMIT_CRITERIA, Criterion
 
@@ -45,9 +45,11 @@ class CaseStudy:
 
 def case_scale(case: Case, technology: Technology) -> float:
     """Power seen in a case per unit of rating (0 where the technology does not run)."""
-    if not technology.scale:
-        return technology.coincidence
-    return case.scales.get(technology.scale, 0.0) * technology.coincidence
+    return _output(case, technology) * technology.coincidence
+
+
+def _output(case: Case, technology: Technology) -> float:
+    return case.scales.get(technology.scale, 0.0) if technology.scale else 1.0
 
 
 def plant_draw(direction: str, reactive: float) -> complex:
@@ -83,7 +85,8 @@ def _generation(feeder: Feeder, case: Case, direction: str) -> Complexes:
         technology = feeder.technologies[which]
         way = direction if technology.direction == BOTH else technology.direction
         if way:
-            seen = rating * case_scale(case, technology)
+            # kW x scale; coincidence belongs to what is asked for, not to what is there.
+            seen = rating * _output(case, technology)
             drawn[node] += seen * plant_draw(way, reactive) / feeder.network.phases
     return drawn
 
@@ -120,18 +123,21 @@ def study_case(feeder: Feeder, index: int, found: Solved, direction: str) -> Cas
     case, settings = feeder.cases[index], feeder.settings
     side = settings.regulator_edge * (1 if direction == EXPORT else -1)
     try:
-        held = hold_at_edge(
+        # The edge is that of the base voltage; plants of direction `both` only run after it.
+        edge = hold_at_edge(
             feeder.network,
-            case_loading(feeder, case, direction),
+            case_loading(feeder, case, ""),
             found,
             feeder.regulators,
             side,
             settings,
         )
+        loading = case_loading(feeder, case, direction)
+        held = solve_at(feeder.network, loading, edge.ratio, settings)
     except NoSolutionError as error:
         raise _named(error, feeder, case) from error
     own = steady_limits(feeder, held, case, direction)
-    if feeder.z_source is None:
+    if feeder.z_source is None or not np.isfinite(feeder.change).any():
         change = change_limits(feeder, held.network.gain, held.point, 0)
         both = System(held.network, held.loading, _join(own, change))
         posed: tuple[Posed, ...] = (_pose(feeder, held, both, 0),)
@@ -232,18 +238,39 @@ def _join(*parts: Limits, bank_other: complex | None = None) -> Limits:
 
 def _pose(feeder: Feeder, held: Solved, system: System, shift: int) -> Posed:
     """Relax the limits that are broken with nothing added: nobody pays for what he found."""
-    settings, limits = feeder.settings, system.limits
+    limits = system.limits
     measured = measure(system.network, limits, held.point)[:, 0]
+    loading = _element_loading(limits, measured)
+    broken = (slack(limits, measured[:, None])[:, 0] < 0) | (loading > 1)
+    broken &= limits.criterion >= 0
+    relaxed = np.where(broken, _allowance(feeder, system, measured, loading), limits.bound)
+    own = System(system.network, system.loading, replace(limits, bound=relaxed))
+    return Posed(own, shift, broken, held.point)
+
+
+def _allowance(feeder: Feeder, system: System, measured: Floats, loading: Floats) -> Floats:
+    """Bound that stands in for a broken one: the base value and what it may worsen by."""
+    settings, limits = feeder.settings, system.limits
     gain = system.network.gain[limits.element, limits.phase]
-    sign = np.where(limits.upper, 1.0, -1.0)
-    step = sign * settings.worsen_voltage_pu / gain
-    voltage = (np.sqrt(np.maximum(measured, 0.0)) + step) ** 2
+    step = np.where(limits.upper, 1.0, -1.0) * settings.worsen_voltage_pu / gain
     share = 1 + settings.worsen_loading_pct / 100
-    squared = limits.quantity != Quantity.HEAD_POWER
-    loading = measured * np.where(squared, share**2, share)
-    allowance = np.where(limits.quantity == Quantity.VOLTAGE, voltage, loading)
-    relaxed, broken = relax_broken(limits, measured, allowance)
-    return Posed(System(system.network, system.loading, relaxed), shift, broken, held.point)
+    return np.select(
+        [limits.quantity == Quantity.VOLTAGE, limits.quantity == Quantity.HEAD_POWER],
+        [(np.sqrt(np.maximum(measured, 0.0)) + step) ** 2, measured * share],
+        limits.bound * loading * share**2,
+    )
+
+
+def _element_loading(limits: Limits, measured: Floats) -> Floats:
+    """Measured over bound of squared ratings, at the terminal of the element loaded more."""
+    ratings = (limits.quantity != Quantity.VOLTAGE) & (limits.quantity != Quantity.HEAD_POWER)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        share = np.where(ratings & (limits.bound > 0), measured / limits.bound, 0.0)
+    sending = limits.quantity == Quantity.CURRENT_FROM
+    receiving = limits.quantity == Quantity.CURRENT_TO
+    # Both terminals of an element stand in the same order.
+    share[sending] = share[receiving] = np.maximum(share[sending], share[receiving])
+    return share
 
 
 __all__ = ["BOTH", "WATCHED", "CaseStudy", "Posed", "base_run", "case_scale", "study_case"]

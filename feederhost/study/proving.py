@@ -26,7 +26,7 @@ from feederhost.proof.branchflow import (
 from feederhost.proof.certificate import Certificate, certify
 from feederhost.proof.pricing import loss_prices
 from feederhost.proof.program import Programme, Relaxed, compile_programme, solve_row, structure
-from feederhost.proof.solver import default_solver
+from feederhost.proof.solver import CLARABEL, ECOS, default_solver
 from feederhost.schema import Proof, State
 from feederhost.study.cases import CaseStudy, case_scale, plant_draw
 from feederhost.study.options import Options
@@ -159,29 +159,38 @@ class Prover:
         assert row.evidence is not None
         own: Evidence = row.evidence
         programme = self.programme(own.system)
-        scale = max(row.rating, settings.scale_floor * row.candidate.cap)
 
-        def solve(prices: Floats) -> Relaxed:
+        def solve(prices: Floats, cap: float, solver: str = self.solver) -> Relaxed:
             return solve_row(
                 programme, own.system, own.flow, own.seek, own.column, prices,
-                row.candidate.cap, scale, self.solver,
+                row.rating, cap, solver,
             )  # fmt: skip
 
         prices = own.certificate.prices[:, own.column]
-        relaxed = solve(prices) if row.limit >= 0 else None
-        plain = solve(np.zeros_like(prices)) if with_plain else None
+        # The programme is convex: a cap that does not bind leaves its optimum where it is, and
+        # a near one spares the solver numbers of very different size.
+        near = min(row.candidate.cap, settings.solver_room * row.rating)
+        relaxed = solve(prices, near) if row.limit >= 0 else None
+        if relaxed is not None and not self._agrees(relaxed, row) and self.solver == ECOS:
+            # ECOS may call an inexact end clean; the second solver has the last word.
+            relaxed = solve(prices, near, CLARABEL)
+        plain = solve(np.zeros_like(prices), row.candidate.cap) if with_plain else None
         own = replace(own, relaxed=relaxed, plain=plain)
-        agrees = (
+        if (
             relaxed is not None
-            and abs(relaxed.g - row.rating) <= settings.solver_agreement * row.rating
-        )
-        if agrees and bool(own.certificate.closes[own.column]):
+            and self._agrees(relaxed, row)
+            and bool(own.certificate.closes[own.column])
+        ):
             return replace(row, evidence=own, proof=Proof.PROVEN, upper=row.rating)
         upper = upper_bound(
             self.programme(own.system, cuts=True), own.system, own.flow, own.seek, own.column,
             row.rating, row.candidate.cap, self.solver, settings,
         )  # fmt: skip
         return replace(row, evidence=own, proof=Proof.BRACKETED, upper=upper)
+
+    def _agrees(self, relaxed: Relaxed, row: HostingRow) -> bool:
+        tolerance = self.feeder.settings.solver_agreement * row.rating
+        return bool(abs(relaxed.g - row.rating) <= tolerance)
 
 
 def hosted(row: HostingRow) -> bool:
