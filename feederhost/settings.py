@@ -129,7 +129,10 @@ class Settings:
         0.02, "-", "lowest loss price as a share of the branch resistance", _METHOD
     )
     price_floor_share: float = _setting(
-        1e-3, "-", "least resistance in the price floor, as a share of the mean", _METHOD
+        1e-6, "-", "lowest loss price of a branch's own power, as a share of the rating", _METHOD
+    )
+    idle_share: float = _setting(
+        1e-3, "-", "least power a branch is scaled by, as a share of the largest", _METHOD
     )
     price_raises: int = _setting(
         40, "-", "most rounds of raising prices where a multiplier is negative", _METHOD
@@ -146,6 +149,12 @@ class Settings:
     )
     solver_agreement: float = _setting(
         1e-4, "-", "largest relative gap between solver and AC value of a proven row", _METHOD
+    )
+    solver_gap: float = _setting(
+        1e-7, "-", "duality gap at which the conic solver stops, as a share of the rating", _METHOD
+    )
+    solver_feasibility: float = _setting(
+        1e-8, "-", "residual at which the conic solver stops", _METHOD
     )
     solver_room: float = _setting(
         10.0, "-", "cap of the priced programme over the AC value", _METHOD

@@ -90,10 +90,10 @@ def row_of(hosting: Hosting, node: str, technology: str) -> HostingRow:
     return row
 
 
-def per_criterion(hosting: Hosting, row: HostingRow) -> dict[str, float]:
+def per_criterion(row: HostingRow) -> dict[str, float]:
     """Return the first violation of every criterion that is met up to the cap, in kW."""
     return {
-        str(c): hosting.feeder.kw(float(row.by_group[g]))
+        str(c): 1000 * float(row.by_group[g])  # the power base of the core is 1 MVA
         for g, c in enumerate(LIMIT_CRITERIA)
         if np.isfinite(row.by_group[g])
     }

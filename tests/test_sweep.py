@@ -202,7 +202,7 @@ def test_a_sweep_that_is_cut_short_is_no_solution():
 
 
 def test_a_collapsed_voltage_is_no_solution():
-    # A dead short of 9 pu admittance behind z = 1 leaves 0.1 pu: at the collapse limit.
+    # An admittance of 0.5 behind z = 1 leaves 1 / 1.5 = 0.667 pu.
     net = network([-1, 0], [1.0])
     assert sweep(net, loading(2, shunt={1: 0.5}), Settings(collapse_pu=0.1)).solved[0]
     assert not sweep(net, loading(2, shunt={1: 0.5}), Settings(collapse_pu=0.7)).solved[0]

@@ -40,7 +40,9 @@ def upper_bound(
             break
         low = (rating + high) / 2
         cuts = flow_ranges(system, flow, seek, column, low, high)
-        found = solve_row(programme, system, flow, seek, column, zero, rating, high, solver, cuts)
+        found = solve_row(
+            programme, system, flow, seek, column, zero, rating, high, solver, settings, cuts
+        )
         if found.answer.status is Status.INFEASIBLE:
             high = low
         elif np.isfinite(found.g) and found.g < high * (1 - settings.solver_agreement):

@@ -9,7 +9,10 @@ exchange rate at which a fictitious ell_k buys rating is
 
 and a price just above it removes the profit and nothing else:
 
-    w_k = max( (1 + eps) max(0, rate_k), floor * r_k )
+    w_k = max( (1 + eps) max(0, rate_k), floor * r_k, share * g / |S_k|^2 )
+
+The floors keep the current of a branch from floating where its loss buys nothing: the first by
+its resistance, the second (switches, idle branches) by a millionth of the rating.
 
 Both sensitivities come from one sweep of the multiplier recursion with all cones left out.  For
 voltage_high at node b it reproduces D_bk / (2 sigma (R_bj + t X_bj)).
@@ -26,8 +29,16 @@ from feederhost.proof.certificate import multipliers_at
 from feederhost.settings import Settings
 
 
-def loss_prices(flow: BranchFlow, system: System, seek: Seek, settings: Settings) -> Floats:
-    """Return loss prices w, (n, m), in rating per unit of squared current."""
+def loss_prices(
+    flow: BranchFlow, system: System, seek: Seek, rating: Floats, settings: Settings
+) -> Floats:
+    """Return loss prices w, (n, m), in rating per unit of squared current.
+
+    Parameters
+    ----------
+    rating : (m,) float
+        Rating at the AC point.
+    """
     m = seek.node.size
     columns = np.arange(m)
     gradient = limit_gradient(flow, system, seek, reduced=True)
@@ -38,8 +49,9 @@ def loss_prices(flow: BranchFlow, system: System, seek: Seek, settings: Settings
     with np.errstate(divide="ignore", invalid="ignore"):
         rate = np.where(gained > 0, gained / spent, 0.0)
     rate = np.where(np.isfinite(rate), rate, 0.0)
-    # Switches have no resistance; a small common floor keeps their current from floating.
-    least = np.maximum(flow.r, settings.price_floor_share * flow.r[1:].mean())
-    w = np.maximum((1 + settings.price_margin) * rate, settings.price_floor * least)
+    power = flow.P**2 + flow.Q**2
+    power = np.maximum(power, settings.idle_share**2 * power.max(axis=0))
+    w = np.maximum((1 + settings.price_margin) * rate, settings.price_floor * flow.r)
+    w = np.maximum(w, settings.price_floor_share * rating / power)
     w[0] = 0.0
     return w

@@ -27,7 +27,8 @@ import scipy.sparse as sp
 from feederhost.flow.limits import Limits, Quantity, System
 from feederhost.flow.tree import Floats, Tree, path
 from feederhost.proof.branchflow import BranchFlow, Seek
-from feederhost.proof.solver import Answer, Status, solve
+from feederhost.proof.solver import SOLVERS, Answer, Status, solve
+from feederhost.settings import Settings
 
 Values = dict[str, Floats | float]
 
@@ -76,10 +77,13 @@ class Cuts:
 
 @dataclass(frozen=True)
 class Programme:
-    """A compiled programme with its parameters; ``key`` tells which systems it fits."""
+    """A compiled programme with its parameters; ``key`` tells which systems it fits.
+
+    ``problems`` holds it once per solver, on the same variables and parameters.
+    """
 
     key: tuple[object, ...]
-    problem: cp.Problem
+    problems: dict[str, cp.Problem]
     parameters: dict[str, cp.Parameter]
     variables: dict[str, cp.Variable]
     cones: cp.SOC
@@ -154,7 +158,12 @@ def compile_programme(system: System, *, cuts: bool = False) -> Programme:
         cp.vstack([*flow, squared_current - squared_voltage]),
         axis=0,
     )
-    within = [given("v_min") <= v, v <= given("v_max"), -1 <= g, g <= given("cap", 1)]
+    within = [
+        given("v_min") <= cp.multiply(given("v_min_unit"), v),
+        cp.multiply(given("v_max_unit"), v) <= given("v_max"),
+        -1 <= g,
+        g <= given("cap", 1),
+    ]
     rated: dict[Quantity, np.ndarray] = {}
     for end, voltage in ((Quantity.CURRENT_FROM, v_pi), (Quantity.CURRENT_TO, v)):
         k = limits.element[_real(limits) & (limits.quantity == end)] - 1
@@ -188,9 +197,9 @@ def compile_programme(system: System, *, cuts: bool = False) -> Programme:
             ell <= given("ell_room"), given("g_low", 1) <= g,
         ]  # fmt: skip
     objective = cp.Maximize(cp.sum(g) - given("w", nonneg=True) @ ell)
-    problem = cp.Problem(objective, [*balance, cones, *within])
+    problems = {name: cp.Problem(objective, [*balance, cones, *within]) for name in SOLVERS}
     variables = {"g": g, "P": P, "Q": Q, "ell": ell, "v": v}
-    return Programme(structure(system, cuts=cuts), problem, par, variables, cones, rated)
+    return Programme(structure(system, cuts=cuts), problems, par, variables, cones, rated)
 
 
 def solve_row(
@@ -203,6 +212,7 @@ def solve_row(
     rating: float,
     cap: float,
     solver: str,
+    settings: Settings,
     cuts: Cuts | None = None,
 ) -> Relaxed:
     """Value the programme for one row and solve it.
@@ -216,7 +226,7 @@ def solve_row(
     rating, cap : float
         Rating at the origin, which is also its unit; largest rating allowed.
     """
-    origin = _origin(flow, seek, column, rating)
+    origin = _origin(flow, seek, column, rating, settings)
     values = _network_values(flow, seek, column, origin)
     values |= _limit_values(programme, system, flow, column, origin, cap)
     values["w"] = (w * origin.power**2 / origin.rating)[1:]
@@ -224,7 +234,7 @@ def solve_row(
         values |= _cut_values(cuts, origin)
     for name, parameter in programme.parameters.items():
         parameter.value = np.atleast_1d(values[name])
-    answer = solve(programme.problem, solver)
+    answer = solve(programme.problems, solver, settings)
     return _solution(programme, flow, origin, answer)
 
 
@@ -251,14 +261,14 @@ def _head_kinds(limits: Limits) -> set[tuple[Quantity, bool]]:
     return {(Quantity(int(limits.quantity[i])), bool(limits.upper[i])) for i in rows}
 
 
-def _origin(flow: BranchFlow, seek: Seek, column: int, rating: float) -> Origin:
+def _origin(flow: BranchFlow, seek: Seek, column: int, rating: float, settings: Settings) -> Origin:
     P, Q, v = flow.P[:, column], flow.Q[:, column], flow.v[:, column]
     draw = seek.draw[column]
     unit = max(rating, np.finfo(float).tiny)
     on_path = path(flow.tree, int(seek.node[column]))
     power = np.hypot(P, Q)
     power[on_path] = np.maximum(power[on_path], unit * abs(draw))
-    power = np.maximum(power, _LEAST_POWER * power.max())
+    power = np.maximum(power, settings.idle_share * power.max())
     # What the plant does to the squared voltage at its node, losses aside.
     effect = 2 * (flow.r[on_path] * abs(draw.real) + flow.x[on_path] * abs(draw.imag)).sum() * unit
     volt = float(effect) if effect > 0 else 1.0
@@ -298,9 +308,11 @@ def _limit_values(
     limits, s, whole = system.limits, o.power, float(o.power.max())
     v_min, v_max = voltage_bounds(limits, flow.tree.size)
     values: Values = {
-        "v_min": (v_min - o.v)[1:] / o.volt, "v_max": (v_max - o.v)[1:] / o.volt,
         "cap": (cap - o.g) / o.rating, "head_unit": s[1:] / whole,
     }  # fmt: skip
+    for name, room in (("v_min", v_min - o.v), ("v_max", v_max - o.v)):
+        far = _far(room[1:] / o.volt)
+        values |= {name: room[1:] / o.volt / far, f"{name}_unit": 1 / far}
     for end, below in programme.rated.items():
         k, name = below + 1, end.name.lower()
         rows = _real(limits) & (limits.quantity == end)
@@ -313,9 +325,11 @@ def _limit_values(
             own += 2 * (y.real * flow.r[k, 0] - y.imag * flow.x[k, 0])
         P, Q, v = sign * 2 * y.real, -sign * 2 * y.imag, np.abs(y) ** 2
         there = own * o.ell[k] + v * voltage + P * o.P[k] + Q * o.Q[k]
+        room = (limits.bound[rows] - there) / s[k] ** 2
+        far = _far(room)
         values |= {
-            f"{name}_ell": own, f"{name}_v": v * o.volt / s[k] ** 2, f"{name}_P": P / s[k],
-            f"{name}_Q": Q / s[k], f"{name}_room": (limits.bound[rows] - there) / s[k] ** 2,
+            f"{name}_ell": own / far, f"{name}_v": v * o.volt / s[k] ** 2 / far,
+            f"{name}_P": P / s[k] / far, f"{name}_Q": Q / s[k] / far, f"{name}_room": room / far,
         }  # fmt: skip
     head = complex(flow.head[column])
     for i in np.flatnonzero(_real(limits) & (limits.quantity >= Quantity.HEAD_POWER)):
@@ -331,6 +345,11 @@ def _limit_values(
         else:
             values["export_room"] = (head.real - bound) / whole
     return values
+
+
+def _far(room: Floats) -> Floats:
+    """Divisor that brings a distant bound near 1, so that no number is large."""
+    return np.maximum(np.abs(room), 1.0)
 
 
 def _cut_values(cuts: Cuts, o: Origin) -> Values:
@@ -393,7 +412,5 @@ def voltage_bounds(limits: Limits, n: int) -> tuple[Floats, Floats]:
     return v_min, v_max
 
 
-# Least power unit of a branch, as a share of the largest: an idle branch still needs one.
-_LEAST_POWER = 0.001
 # Squared per unit: the solvers take no infinite numbers.
 _NEVER_REACHED = 4.0

@@ -4,10 +4,13 @@ from __future__ import annotations
 
 import importlib.util
 import warnings
+from collections.abc import Mapping
 from dataclasses import dataclass
 from enum import StrEnum
 
 import cvxpy as cp
+
+from feederhost.settings import Settings
 
 
 class Status(StrEnum):
@@ -46,20 +49,32 @@ def default_solver() -> str:
     return ECOS if importlib.util.find_spec("ecos") else CLARABEL
 
 
-def solve(problem: cp.Problem, solver: str) -> Answer:
-    """Solve with the solver asked for, and again with Clarabel where its answer is not clean."""
-    answer = _solve_once(problem, solver)
+def solve(problems: Mapping[str, cp.Problem], solver: str, settings: Settings) -> Answer:
+    """Solve with the solver asked for, and again with Clarabel where its answer is not clean.
+
+    Parameters
+    ----------
+    problems : mapping of str to cvxpy.Problem
+        The same programme once per solver: a problem that changes its solver is compiled anew.
+    """
+    answer = _solve_once(problems[solver], solver, settings)
     if solver == ECOS and answer.status not in (Status.CLEAN, Status.INFEASIBLE):
-        answer = _solve_once(problem, CLARABEL)
+        answer = _solve_once(problems[CLARABEL], CLARABEL, settings)
     return answer
 
 
-def _solve_once(problem: cp.Problem, solver: str) -> Answer:
+def _solve_once(problem: cp.Problem, solver: str, settings: Settings) -> Answer:
+    gap, feasible = settings.solver_gap, settings.solver_feasibility
+    options: dict[str, float] = (
+        {"abstol": gap, "reltol": gap, "feastol": feasible}
+        if solver == ECOS
+        else {"tol_gap_abs": gap, "tol_gap_rel": gap, "tol_feas": feasible}
+    )
     with warnings.catch_warnings():
         # cvxpy warns where this function reports a status.
         warnings.simplefilter("ignore")
         try:
-            problem.solve(solver=solver.upper(), enforce_dpp=True)
+            problem.solve(solver=solver.upper(), enforce_dpp=True, **options)
         except cp.SolverError:
             return Answer(solver, Status.FAILED, 0)
     status = _KNOWN.get(problem.status, Status.FAILED)

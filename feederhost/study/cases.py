@@ -167,6 +167,11 @@ def steady_limits(feeder: Feeder, held: Solved, case: Case, direction: str) -> L
     k = np.arange(1, n)
     parent_gain = gain[feeder.tree.parent[1:]]
     rated = np.isfinite(feeder.rating[1:, 0])
+    # Without a shunt both terminals carry one current: only the tighter one is a row.
+    network = held.network
+    both = (network.y_from[1:, 0] != 0) | (network.y_to[1:, 0] != 0)
+    sending = rated & (both | (parent_gain < gain[1:]))
+    receiving = rated & (both | (parent_gain >= gain[1:]))
     i2 = feeder.rating[1:, 0] ** 2
     code = LIMIT_CRITERIA.index
     rows = [
@@ -174,10 +179,10 @@ def steady_limits(feeder: Feeder, held: Solved, case: Case, direction: str) -> L
                (feeder.v_max[1:, 0] / gain[1:]) ** 2),
         _block(code(Criterion.VOLTAGE_LOW), Quantity.VOLTAGE, k, False,
                (feeder.v_min[1:, 0] / gain[1:]) ** 2),
-        _block(feeder.rating_criterion[1:][rated], Quantity.CURRENT_FROM, k[rated], True,
-               (i2 * parent_gain**2)[rated]),
-        _block(feeder.rating_criterion[1:][rated], Quantity.CURRENT_TO, k[rated], True,
-               (i2 * gain[1:] ** 2)[rated]),
+        _block(feeder.rating_criterion[1:][sending], Quantity.CURRENT_FROM, k[sending], True,
+               (i2 * parent_gain**2)[sending]),
+        _block(feeder.rating_criterion[1:][receiving], Quantity.CURRENT_TO, k[receiving], True,
+               (i2 * gain[1:] ** 2)[receiving]),
     ]  # fmt: skip
     source = np.zeros(1, dtype=np.intp)
     head = Quantity.HEAD_POWER
@@ -266,11 +271,10 @@ def _element_loading(limits: Limits, measured: Floats) -> Floats:
     ratings = (limits.quantity != Quantity.VOLTAGE) & (limits.quantity != Quantity.HEAD_POWER)
     with np.errstate(divide="ignore", invalid="ignore"):
         share = np.where(ratings & (limits.bound > 0), measured / limits.bound, 0.0)
-    sending = limits.quantity == Quantity.CURRENT_FROM
-    receiving = limits.quantity == Quantity.CURRENT_TO
-    # Both terminals of an element stand in the same order.
-    share[sending] = share[receiving] = np.maximum(share[sending], share[receiving])
-    return share
+    current = (limits.quantity == Quantity.CURRENT_FROM) | (limits.quantity == Quantity.CURRENT_TO)
+    worst = np.zeros(int(limits.element.max(initial=0)) + 1)
+    np.maximum.at(worst, limits.element[current], share[current])
+    return np.where(current, worst[limits.element], share)
 
 
 __all__ = ["BOTH", "WATCHED", "CaseStudy", "Posed", "base_run", "case_scale", "study_case"]

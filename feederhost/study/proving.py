@@ -127,7 +127,7 @@ class Prover:
         limit = np.array([max(r.limit, 0) for r in rows])
         seek = Seek(plants.node, plants.draw.sum(axis=1), limit)
         flow = branch_flow(system, plants, point)
-        prices = loss_prices(flow, system, seek, settings)
+        prices = loss_prices(flow, system, seek, rating, settings)
         gradient = limit_gradient(flow, system, seek, reduced=False)
         slope = loss_current_slope(point, moved)
         certificate = certify(flow, seek, gradient, prices, slope, settings)
@@ -163,7 +163,7 @@ class Prover:
         def solve(prices: Floats, cap: float, solver: str = self.solver) -> Relaxed:
             return solve_row(
                 programme, own.system, own.flow, own.seek, own.column, prices,
-                row.rating, cap, solver,
+                row.rating, cap, solver, settings,
             )  # fmt: skip
 
         prices = own.certificate.prices[:, own.column]
