@@ -35,6 +35,8 @@ def _guarded(command: Callable[..., int | None]) -> Callable[..., None]:
             for finding in fatal(error.findings):
                 click.echo(finding.line(), err=True)
             _fail(error, debug)
+        except BrokenPipeError:
+            raise  # whoever read the output has gone; click ends quietly
         except (FeederhostError, OSError, MemoryError) as error:
             _fail(error, debug)
         except Exception as error:

@@ -103,7 +103,7 @@ def _input(sheet: Sheet) -> str:
 
 def _unit(column: Column) -> str:
     if column.units:
-        return ", ".join(column.units).replace("_", " ")
+        return ""  # it stands in the header
     return "" if column.unit == "-" else column.unit
 
 

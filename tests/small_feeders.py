@@ -1,4 +1,4 @@
-"""Small networks with their limits, a nodal judge, and whole feeders from workbook tables.
+"""Small networks with their limits, the way from a search to a proof, and a nodal judge.
 
 The nodal judge solves Y V + load(V) = 0 by Newton with the ideal ratios written out: no tree,
 no sweep and no referral, so that it shares nothing with the engine it judges.
@@ -7,16 +7,9 @@ no sweep and no referral, so that it shares nothing with the engine it judges.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
-from typing import Any
+from dataclasses import dataclass
 
 import numpy as np
-import pandas as pd
-from feederhost.errors import fatal
-from feederhost.feeder.model import Candidate, Feeder
-from feederhost.feeder.perunit import build_feeder
-from feederhost.feeder.tables import check_tables
-from feederhost.feeder.topology import root_feeder
 from feederhost.flow.limits import Limits, Quantity, System
 from feederhost.flow.network import Loading, Network, OperatingPoint
 from feederhost.flow.search import WATCHED, Plants, drawn_power, first_violations
@@ -32,7 +25,8 @@ from feederhost.proof.branchflow import (
 )
 from feederhost.proof.certificate import Certificate, certify
 from feederhost.proof.pricing import loss_prices
-from feederhost.proof.program import Relaxed, compile_programme, solve_row
+from feederhost.proof.program import compile_programme
+from feederhost.proof.valuing import Relaxed, solve_row
 from feederhost.schema import LIMIT_CRITERIA, Criterion
 from feederhost.settings import Settings
 
@@ -209,7 +203,7 @@ def pose(
     moved = tangent(sys.network, sys.loading, settings, point, power, change)
     flow = branch_flow(sys, one, point)
     seek = Seek(one.node, one.draw.sum(axis=1), np.array([row]))
-    w = loss_prices(flow, sys, seek, settings) if prices is None else prices
+    w = loss_prices(flow, sys, seek, np.array([rating]), settings) if prices is None else prices
     gradient = limit_gradient(flow, sys, seek, reduced=False)
     slope = loss_current_slope(point, moved)
     certificate = certify(flow, seek, gradient, w, slope, settings)
@@ -226,7 +220,7 @@ def relax(
     w = posed.certificate.prices[:, 0] if prices is None else prices
     return solve_row(
         compile_programme(posed.system), posed.system, posed.flow, posed.seek, 0, w,
-        posed.rating, float(posed.plant.cap[0]) if cap is None else cap, solver,
+        posed.rating, float(posed.plant.cap[0]) if cap is None else cap, solver, SETTINGS,
     )  # fmt: skip
 
 
@@ -294,37 +288,3 @@ def judge(net: Network, load: Loading, ratio: np.ndarray | None = None) -> np.nd
     return nodal_voltages(
         Y, load.power[..., 0], load.current[..., 0], load.shunt[..., 0], load.source[:, 0]
     )
-
-
-# --- whole feeders ---------------------------------------------------------------------------
-
-
-def raw_tables(tables: Mapping[str, list[dict[str, Any]]]) -> dict[str, pd.DataFrame]:
-    """Rows per sheet as the reader hands them on: row 2 is the first below the header."""
-    out = {}
-    for name, rows in tables.items():
-        frame = pd.DataFrame(rows, dtype=object)
-        frame = frame.where(frame.notna(), None)
-        frame.index = pd.RangeIndex(2, 2 + len(frame))
-        out[name] = frame
-    return out
-
-
-def built(tables: Mapping[str, list[dict[str, Any]]], **settings: Any) -> Feeder:
-    """Check, root and convert workbook tables; the named settings win."""
-    checked = check_tables(raw_tables(tables))
-    topology, found = root_feeder(checked)
-    assert not fatal(checked.findings + tuple(found))
-    assert topology is not None
-    feeder = build_feeder(checked, topology, "feeder")
-    return replace(feeder, settings=replace(feeder.settings, **settings))
-
-
-def asked(feeder: Feeder, nodes: Sequence[str], technology: str) -> Feeder:
-    """Return the feeder with the given candidates only."""
-    cap = feeder.candidates[0].cap
-    own = feeder.technology(technology)
-    wanted = tuple(
-        Candidate(feeder.nodes.index(name), technology, own.reactive, cap) for name in nodes
-    )
-    return replace(feeder, candidates=wanted)

@@ -25,7 +25,6 @@ from small_feeders import (
     head_export,
     head_import,
     high,
-    limits,
     loading,
     low,
     network,
@@ -201,7 +200,3 @@ def test_rows_side_by_side_have_gradients_of_their_own():
     assert np.flatnonzero(gradient.ell[:, 0]).tolist() == []
     assert np.flatnonzero(gradient.ell[:, 1]).tolist() == [2]
     assert np.flatnonzero(gradient.v[:, 1]).tolist() == [1]
-
-
-def test_watching_rows_do_not_change_the_order():
-    assert limits(ROWS).quantity.tolist() == [0, 0, 1, 2, 1, 1, 2, 3, 3, 4]

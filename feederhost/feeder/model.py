@@ -30,12 +30,16 @@ class Technology:
 
 @dataclass(frozen=True)
 class Case:
-    """One load and generation level; ``scales`` holds every scale column by name."""
+    """One load and generation level; ``scales`` holds every scale column by name.
+
+    ``bank_known`` tells whether the other power through the bank is given.
+    """
 
     name: str
     scales: dict[str, float]
     source_voltage: float
     bank_other: complex
+    bank_known: bool
     basis: str
     hours: float
 

@@ -61,6 +61,24 @@ def check_phases(tables: Tables, topology: Topology) -> list[Finding]:
     return findings
 
 
+def unbalanced_phases(tables: Tables) -> list[Finding]:
+    """Return a fatal finding per sheet that names phases other than all three.
+
+    The feeder is judged balanced: on a single-phase lateral that would overstate what fits
+    several times, so no number is better than that one.
+    """
+    findings = []
+    for sheet, frame in tables.sheets.items():
+        if "phases" not in frame or sheet == "requests":
+            continue
+        rows = [row for row, cells in tables.rows(sheet) if cells["phases"] not in ("", "ABC")]
+        if rows:
+            problem = f"{len(rows)} rows are not on all three phases: this feeder is not balanced"
+            hint = "only feeders with phases ABC throughout, or without phases, are judged here"
+            findings.append(tables.finding(Severity.FATAL, sheet, rows[0], "phases", problem, hint))
+    return findings
+
+
 def _branch_phases(tables: Tables) -> dict[tuple[str, int], str]:
     return {
         (sheet, row): cells["phases"]

@@ -12,8 +12,9 @@ import numpy as np
 from feederhost.flow.limits import Quantity, System
 from feederhost.flow.tree import Floats
 from feederhost.proof.branchflow import BranchFlow, Seek
-from feederhost.proof.program import Cuts, Programme, solve_row
+from feederhost.proof.program import Programme
 from feederhost.proof.solver import Status
+from feederhost.proof.valuing import Cuts, solve_row
 from feederhost.settings import Settings
 
 

@@ -14,7 +14,7 @@ import numpy as np
 
 from feederhost.flow.limits import System
 from feederhost.flow.search import Plants, slacks_with
-from feederhost.proof.program import Relaxed
+from feederhost.proof.valuing import Relaxed
 from feederhost.settings import Settings
 
 

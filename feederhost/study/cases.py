@@ -10,7 +10,6 @@ from feederhost.errors import NoSolutionError
 from feederhost.feeder.model import EXPORT, IMPORT, Case, Feeder, Generators, Technology
 from feederhost.flow.limits import Limits, Quantity, System, measure, slack
 from feederhost.flow.network import Loading, OperatingPoint, behind, behind_loading
-from feederhost.flow.search import WATCHED
 from feederhost.flow.sweep import sweep
 from feederhost.flow.taps import Solved, find_taps, hold_at_edge, solve_at
 from feederhost.flow.tree import Complexes, Floats
@@ -275,6 +274,3 @@ def _element_loading(limits: Limits, measured: Floats) -> Floats:
     worst = np.zeros(int(limits.element.max(initial=0)) + 1)
     np.maximum.at(worst, limits.element[current], share[current])
     return np.where(current, worst[limits.element], share)
-
-
-__all__ = ["BOTH", "WATCHED", "CaseStudy", "Posed", "base_run", "case_scale", "study_case"]

@@ -7,8 +7,10 @@ from pathlib import Path
 
 from feederhost.errors import Finding, InputError, fatal
 from feederhost.feeder.audit import audit
+from feederhost.feeder.branches import reversed_regulators
 from feederhost.feeder.model import Feeder
-from feederhost.feeder.perunit import build_feeder, reversed_regulators
+from feederhost.feeder.perunit import build_feeder
+from feederhost.feeder.phases import unbalanced_phases
 from feederhost.feeder.tables import Tables, check_tables, in_order
 from feederhost.feeder.topology import root_feeder
 from feederhost.sheets.reading import read_workbook
@@ -48,6 +50,7 @@ def load_feeder(path: Path) -> Loaded:
     if topology is not None:
         findings += audit(tables, topology)
         findings += reversed_regulators(tables, topology)
+        findings += unbalanced_phases(tables)
     findings = list(in_order(findings))
     stopping = fatal(findings)
     if stopping or topology is None:

@@ -53,7 +53,8 @@ class Found:
 class HostingRow:
     """One row of the answer; powers per unit, NaN where there is no number.
 
-    ``study`` and ``posed`` locate the binding system, ``limit`` its row (-1: none).
+    ``study`` and ``posed`` locate the binding system, ``limit`` its row (-1: none); ``slack``
+    is the least of all limits and cases at the published value (squared or power per unit).
     """
 
     candidate: Candidate
@@ -70,6 +71,7 @@ class HostingRow:
     limit: int = -1
     value: float = math.nan
     mismatch: float = math.nan
+    slack: float = math.nan
     evidence: Evidence | None = None
     broken: tuple[str, ...] = ()
 
@@ -347,7 +349,7 @@ def _judged(
     passes = least >= 0 and mismatch <= tolerance
     passes = passes and (row.state is State.CAPPED or above < 0)
     if passes:
-        return replace(row, mismatch=mismatch)
+        return replace(row, mismatch=mismatch, slack=least)
     state = row.state if row.state is not State.CAPPED else State.HOSTED
     return replace(
         row, state=state, proof=Proof.FAILED, criterion=Criterion.AC_CHECK, rating=math.nan,

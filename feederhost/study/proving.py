@@ -25,8 +25,9 @@ from feederhost.proof.branchflow import (
 )
 from feederhost.proof.certificate import Certificate, certify
 from feederhost.proof.pricing import loss_prices
-from feederhost.proof.program import Programme, Relaxed, compile_programme, solve_row, structure
+from feederhost.proof.program import Programme, compile_programme, structure
 from feederhost.proof.solver import CLARABEL, ECOS, default_solver
+from feederhost.proof.valuing import Relaxed, solve_row
 from feederhost.schema import Proof, State
 from feederhost.study.cases import CaseStudy, case_scale, plant_draw
 from feederhost.study.options import Options

@@ -106,9 +106,9 @@ def host_report(path: Path, options: Options) -> Report:
     feeder = hosting.feeder
     binding = {r.study.case.name for r in hosting.rows if r.study is not None}
     voltages, complete = base_table(feeder, hosting.base, binding)
-    flags = flags_for_all(loaded)
+    flags = flags_for_all(loaded, options)
     tables = {
-        "summary": summary_table(loaded, hosting, complete),
+        "summary": summary_table(loaded, hosting, options, complete),
         "hosting": hosting_table(hosting, flags),
         "criteria": criteria_table(hosting),
         "relaxation": relaxation_table(hosting),

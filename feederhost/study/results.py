@@ -12,9 +12,9 @@ import pandas as pd
 from feederhost.errors import Finding
 from feederhost.feeder.model import EXPORT, Feeder
 from feederhost.flow.limits import Quantity
-from feederhost.flow.search import NO_SOLUTION, WATCHED
+from feederhost.flow.search import WATCHED
 from feederhost.schema import BASES, LIMIT_CRITERIA, RESULT, Criterion, Proof, State
-from feederhost.study.cases import CaseStudy, case_scale
+from feederhost.study.cases import case_scale
 from feederhost.study.nodal import Hosting, HostingRow, element_name
 
 _HOSTED = (State.HOSTED, State.HOSTED_BASE_VIOLATION)
@@ -141,7 +141,8 @@ def _row_flags(hosting: Hosting, row: HostingRow) -> list[str]:
     if row.broken:
         more = f" and {len(row.broken) - 3} more" if len(row.broken) > 3 else ""
         flags.append("base violation: " + ", ".join(row.broken[:3]) + more)
-    if row.criterion is Criterion.BANK_RATING and all(c.bank_other == 0 for c in feeder.cases):
+    bank = row.criterion is Criterion.BANK_RATING
+    if bank and row.study is not None and not row.study.case.bank_known:
         flags.append("bank may be shared with other feeders")
     if row.criterion is Criterion.AC_CHECK and row.proof is not Proof.FAILED:
         flags.append("power flow solution is lost before any limit is met")
@@ -254,6 +255,3 @@ def trusted(hosting: Hosting) -> bool:
     """Whether every row that was analysed is proven, or capped without need of proof."""
     fine = (Proof.PROVEN, Proof.NOT_NEEDED)
     return all(r.proof in fine for r in hosting.rows if r.state is not State.NOT_ANALYSED)
-
-
-__all__ = ["NO_SOLUTION", "CaseStudy", "audit_table", "hosting_table"]

@@ -33,7 +33,9 @@ NOT_COVERED = (
 _LIBRARIES = ("numpy", "scipy", "pandas", "cvxpy", "ecos", "clarabel", "networkx", "openpyxl")
 
 
-def summary_table(loaded: Loaded, hosting: Hosting, base_complete: bool) -> pd.DataFrame:
+def summary_table(
+    loaded: Loaded, hosting: Hosting, options: Options, base_complete: bool
+) -> pd.DataFrame:
     """Return the `summary` sheet."""
     feeder = hosting.feeder
     rows: list[tuple[str, object]] = [("feeder", feeder.name)]
@@ -47,6 +49,8 @@ def summary_table(loaded: Loaded, hosting: Hosting, base_complete: bool) -> pd.D
     for line in technology_lines(hosting):
         rows.append((f"hosting {line['technology']}", _sentence(line)))
     rows += _limits_used(feeder)
+    if options.cases:
+        rows.append(("caution", "only these cases were looked at: " + ", ".join(options.cases)))
     if not base_complete:
         rows.append(("base", "lists the binding cases and those of lowest and highest voltage"))
     rows.append(("unlimited elements", ", ".join(unlimited(feeder)) or "none"))
@@ -95,7 +99,8 @@ def _limits_used(feeder: Feeder) -> list[tuple[str, object]]:
     for f in fields(settings):
         value = getattr(settings, f.name)
         if f.metadata["sheet"] and value is not None:
-            rows.append((f"limit {f.name}", f"{value:g} {f.metadata['unit']}"))
+            unit = f.metadata["unit"].replace("-", "")
+            rows.append((f"limit {f.name}", f"{value:g} {unit}".strip()))
     for name, value in (
         ("bank rating", feeder.bank), ("head export", feeder.export_limit),
         ("head import", feeder.import_limit),
@@ -183,6 +188,9 @@ def timing_table(rows: list[tuple[str, object]]) -> pd.DataFrame:
     return _pairs("timing", rows)
 
 
-def flags_for_all(loaded: Loaded) -> str:
-    """Return the flags that every row of a feeder carries."""
-    return "phases_assumed" if loaded.phases_assumed else ""
+def flags_for_all(loaded: Loaded, options: Options) -> str:
+    """Return the flags that every row of a run carries."""
+    flags = ["phases_assumed"] if loaded.phases_assumed else []
+    if options.cases:
+        flags.append("only cases asked for: " + ", ".join(options.cases))
+    return "; ".join(flags)
