@@ -79,12 +79,13 @@ def host_lines(overview: dict[str, Any]) -> list[str]:
     lines.append(f"{'':<10}{'rows':>6}  {'smallest kW':<22}{'median kW':>10}  largest kW")
     for row in overview["technologies"]:
         if "smallest_kw" in row:
-            low = f"{row['smallest_kw']:,.0f} at {row['smallest_at']}"
-            sign = ">= " if row["capped"] and row["largest_kw"] else ""
-            high = f"{row['largest_kw']:,.0f} at {row['largest_at']}"
+            low = f"{_sign(overview, row, 'smallest_at')}{row['smallest_kw']:,.0f}"
+            low += f" at {row['smallest_at']}"
+            high = f"{_sign(overview, row, 'largest_at')}{row['largest_kw']:,.0f}"
+            high += f" at {row['largest_at']}"
             lines.append(
                 f"{row['technology']:<10}{row['rows']:>6}  {low:<22}{row['median_kw']:>10,.0f}  "
-                f"{sign if _is_capped(overview, row) else ''}{high}"
+                f"{high}"
             )
         else:
             lines.append(f"{row['technology']:<10}{row['rows']:>6}  no value")
@@ -100,12 +101,13 @@ def host_lines(overview: dict[str, Any]) -> list[str]:
     return lines
 
 
-def _is_capped(overview: dict[str, Any], row: dict[str, Any]) -> bool:
-    return any(
-        h["state"] == "capped" and h["technology"] == row["technology"]
-        and h["node"] == row["largest_at"]
+def _sign(overview: dict[str, Any], row: dict[str, Any], key: str) -> str:
+    """Return ">= " where the value named by ``key`` is the search cap, not a limit."""
+    capped = any(
+        h["state"] == "capped" and h["technology"] == row["technology"] and h["node"] == row[key]
         for h in overview["hosting"]
-    )  # fmt: skip
+    )
+    return ">= " if capped else ""
 
 
 def check_lines(overview: dict[str, Any]) -> list[str]:

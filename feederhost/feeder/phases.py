@@ -73,7 +73,8 @@ def unbalanced_phases(tables: Tables) -> list[Finding]:
             continue
         rows = [row for row, cells in tables.rows(sheet) if cells["phases"] not in ("", "ABC")]
         if rows:
-            problem = f"{len(rows)} rows are not on all three phases: this feeder is not balanced"
+            count = "1 row is" if len(rows) == 1 else f"{len(rows)} rows are"
+            problem = f"{count} not on all three phases: this feeder is not balanced"
             hint = "only feeders with phases ABC throughout, or without phases, are judged here"
             findings.append(tables.finding(Severity.FATAL, sheet, rows[0], "phases", problem, hint))
     return findings

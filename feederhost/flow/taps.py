@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -67,8 +67,9 @@ def solve_at(network: Network, loading: Loading, ratio: Floats, settings: Settin
     there = refer_loading(loading, referred.gain)
     point = sweep(referred, there, settings)
     if not point.solved.all() or point.mismatch.max() > settings.mismatch_tolerance:
-        size = np.nan_to_num(np.abs(point.V), nan=0.0).min(axis=(1, 2))
-        raise NoSolutionError(str(int(size.argmin())))
+        # The first sweep's drop still shows where the feeder is weakest.
+        early = sweep(referred, there, replace(settings, sweep_limit=1))
+        raise NoSolutionError(str(int(np.abs(early.V - early.V[0]).max(axis=(1, 2)).argmax())))
     return Solved(ratio, (), referred, there, point)
 
 

@@ -64,24 +64,24 @@ def compile_programme(system: System, *, cuts: bool = False) -> Programme:
     children, from_source = _incidence(tree)
     par: dict[str, cp.Parameter] = {}
 
-    def given(name: str, size: int = N, **kind: bool) -> cp.Parameter:
+    def given(name: str, size: int | tuple[()] = N, **kind: bool) -> cp.Parameter:
         par[name] = cp.Parameter(size, name=name, **kind)
         return par[name]
 
     P, Q, ell, v = (cp.Variable(N) for _ in range(4))
-    g = cp.Variable(1)
+    g = cp.Variable()
     v_pi = children.T @ v
     # Powers of children in the unit of their parent.
     scaled = given("ratio")
     balance = [
-        P == cp.multiply(given("r"), ell) + given("d") * g + cp.multiply(given("G"), v)
+        P == cp.multiply(given("r"), ell) + cp.multiply(given("d"), g) + cp.multiply(given("G"), v)
         + children @ cp.multiply(scaled, P) + given("res_P"),
-        Q == cp.multiply(given("x"), ell) + given("e") * g - cp.multiply(given("B"), v)
+        Q == cp.multiply(given("x"), ell) + cp.multiply(given("e"), g) - cp.multiply(given("B"), v)
         + children @ cp.multiply(scaled, Q) + given("res_Q"),
         v == v_pi - 2 * (cp.multiply(given("r_v"), P) + cp.multiply(given("x_v"), Q))
         + cp.multiply(given("z2_v"), ell) + given("res_v"),
     ]  # fmt: skip
-    squared_voltage = given("volt", 1) * v_pi + given("v_pi_0")
+    squared_voltage = cp.multiply(given("volt", ()), v_pi) + given("v_pi_0")
     squared_current = ell + given("ell_0")
     flow = [2 * (P + given("P_0")), 2 * (Q + given("Q_0"))]
     cones = cp.SOC(
@@ -93,7 +93,7 @@ def compile_programme(system: System, *, cuts: bool = False) -> Programme:
         given("v_min") <= cp.multiply(given("v_min_unit"), v),
         cp.multiply(given("v_max_unit"), v) <= given("v_max"),
         -1 <= g,
-        g <= given("cap", 1),
+        g <= given("cap", ()),
     ]
     rated: dict[Quantity, np.ndarray] = {}
     for end, voltage in ((Quantity.CURRENT_FROM, v_pi), (Quantity.CURRENT_TO, v)):
@@ -125,9 +125,9 @@ def compile_programme(system: System, *, cuts: bool = False) -> Programme:
             + given("secant_room"),
             cp.multiply(given("hull_v"), v_pi) + cp.multiply(given("hull_ell"), ell)
             <= given("hull_room"),
-            ell <= given("ell_room"), given("g_low", 1) <= g,
+            ell <= given("ell_room"), given("g_low", ()) <= g,
         ]  # fmt: skip
-    objective = cp.Maximize(cp.sum(g) - given("w", nonneg=True) @ ell)
+    objective = cp.Maximize(g - given("w", nonneg=True) @ ell)
     problems = {name: cp.Problem(objective, [*balance, cones, *within]) for name in SOLVERS}
     variables = {"g": g, "P": P, "Q": Q, "ell": ell, "v": v}
     return Programme(structure(system, cuts=cuts), problems, par, variables, cones, rated)

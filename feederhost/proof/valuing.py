@@ -115,7 +115,7 @@ def solve_row(
     if cuts is not None:
         values |= _cut_values(cuts, origin)
     for name, parameter in programme.parameters.items():
-        parameter.value = np.atleast_1d(values[name])
+        parameter.value = np.reshape(values[name], parameter.shape)
     answer = solve(programme.problems, solver, settings)
     return _solution(programme, flow, origin, answer)
 
