@@ -36,9 +36,7 @@ JUDGES_WORD = {"search_cap": Criterion.SEARCH_CAP, "no_solution": Criterion.AC_C
 
 @dataclass(frozen=True)
 class Compared:
-    """One row as both see it; ``complaints`` (and, of single criteria, ``differing``) are empty
-    where they agree.
-    """
+    """One row as both see it: what they differ in, as a whole and criterion by criterion."""
 
     name: str
     state: State
