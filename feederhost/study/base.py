@@ -15,7 +15,7 @@ from feederhost.flow.taps import Solved
 from feederhost.flow.tree import Floats
 from feederhost.schema import LIMIT_CRITERIA, RESULT, Criterion
 from feederhost.study.cases import steady_limits
-from feederhost.study.nodal import element_name
+from feederhost.study.rows import element_name
 
 
 def series_loss(solved: Solved) -> complex:

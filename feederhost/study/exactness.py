@@ -16,7 +16,7 @@ from feederhost.proof.branchflow import branch_flow
 from feederhost.proof.conditions import Margins, c1_margin, c2_margin, least_resistance
 from feederhost.schema import RESULT, Proof
 from feederhost.study.cases import steady_limits
-from feederhost.study.nodal import Hosting, HostingRow
+from feederhost.study.rows import Hosting, HostingRow
 
 _FL = "Farivar & Low 2013, Theorem 1"
 _GLTL = "Gan, Li, Topcu & Low 2015, Theorem 1"

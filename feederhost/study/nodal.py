@@ -8,27 +8,21 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from feederhost.errors import UsageError
 from feederhost.feeder.model import EXPORT, IMPORT, Candidate, Feeder, Technology
-from feederhost.flow.search import (
-    GROUPS,
-    NO_SOLUTION,
-    WATCHED,
-    Plants,
-    blocks,
-    first_violations,
-    slacks_with,
-)
+from feederhost.flow.search import GROUPS, NO_SOLUTION, WATCHED, first_violations
 from feederhost.flow.taps import Solved
 from feederhost.flow.tree import Floats, Ints
 from feederhost.schema import LIMIT_CRITERIA, Criterion, Proof, State
-from feederhost.study.cases import BOTH, CaseStudy, base_run, case_scale, plant_draw, study_case
+from feederhost.study.cases import BOTH, CaseStudy, base_run, case_scale, study_case
+from feederhost.study.checking import check_rows
 from feederhost.study.options import Options
 from feederhost.study.proving import Evidence, Prover
+from feederhost.study.rows import Hosting, HostingRow, broken_limits, plants_in
 
 
 @dataclass(frozen=True)
@@ -47,44 +41,6 @@ class Found:
     case: Ints
     posed: Ints
     row: Ints
-
-
-@dataclass(frozen=True)
-class HostingRow:
-    """One row of the answer; powers per unit, NaN where there is no number.
-
-    ``study`` and ``posed`` locate the binding system, ``limit`` its row (-1: none); ``slack``
-    is the least of all limits and cases at the published value (squared or power per unit).
-    """
-
-    candidate: Candidate
-    direction: str
-    state: State
-    proof: Proof
-    criterion: Criterion | None
-    rating: float = math.nan
-    hosting: float = math.nan
-    upper: float = math.nan
-    by_group: Floats = field(default_factory=lambda: np.full(GROUPS, np.inf))
-    study: CaseStudy | None = None
-    posed: int = 0
-    limit: int = -1
-    value: float = math.nan
-    mismatch: float = math.nan
-    slack: float = math.nan
-    evidence: Evidence | None = None
-    broken: tuple[str, ...] = ()
-
-
-@dataclass(frozen=True)
-class Hosting:
-    """All rows of a run with the studies they rest on."""
-
-    feeder: Feeder
-    rows: tuple[HostingRow, ...]
-    base: tuple[Solved, ...]
-    studies: dict[str, tuple[CaseStudy, ...]]
-    solver: str
 
 
 def narrow(feeder: Feeder, options: Options) -> Feeder:
@@ -136,7 +92,7 @@ def host(feeder: Feeder, options: Options) -> Hosting:
     feeder = narrow(feeder, options)
     base = base_solutions(feeder, options)
     studies: dict[str, tuple[CaseStudy, ...]] = {}
-    prover = Prover(feeder, options)
+    prover = Prover(feeder.settings, options.solver)
     rows: dict[Candidate, HostingRow] = {}
     for name in dict.fromkeys(c.technology for c in feeder.candidates):
         technology = feeder.technology(name)
@@ -150,7 +106,7 @@ def host(feeder: Feeder, options: Options) -> Hosting:
                 )
             answers.append(_rows(feeder, technology, candidates, way, studies[way], options))
         chosen = [smaller(pair) for pair in zip(*answers, strict=True)]
-        rows.update(zip(candidates, prover.prove(chosen), strict=True))
+        rows.update(zip(candidates, prove_rows(feeder, prover, chosen, options), strict=True))
     checked = check_rows(feeder, [rows[c] for c in feeder.candidates], studies, options)
     return Hosting(feeder, tuple(checked), base, studies, prover.solver)
 
@@ -162,18 +118,6 @@ def base_solutions(feeder: Feeder, options: Options) -> tuple[Solved, ...]:
         base.append(base_run(feeder, case))
         options.progress("base cases", i + 1, len(feeder.cases))
     return tuple(base)
-
-
-def plants_in(
-    candidates: Sequence[Candidate], direction: str, scale: float, shift: int, phases: int
-) -> Plants:
-    """Return the candidates as plants of one case, rating in nameplate per unit."""
-    draw = np.array([plant_draw(direction, c.reactive) for c in candidates]) * scale
-    return Plants(
-        node=np.array([c.node + shift for c in candidates]),
-        draw=np.repeat(draw[:, None] / phases, phases, axis=1),
-        cap=np.array([c.cap for c in candidates]),
-    )
 
 
 def search(
@@ -251,107 +195,59 @@ def smaller(rows: Sequence[HostingRow]) -> HostingRow:
     return replace(best, by_group=np.min([r.by_group for r in rows], axis=0))
 
 
+def prove_rows(
+    feeder: Feeder, prover: Prover, rows: Sequence[HostingRow], options: Options
+) -> list[HostingRow]:
+    """Return the rows with proof, upper bound and evidence, system by system."""
+    batches: dict[tuple[int, int], list[int]] = {}
+    for i, row in enumerate(rows):
+        if row.study is not None:
+            batches.setdefault((id(row.study), row.posed), []).append(i)
+    plain = _plain_sample([i for b in batches.values() for i in b], feeder, options)
+    proven = list(rows)
+    total = sum(len(b) for b in batches.values())
+    done = 0
+    for members in batches.values():
+        for i, own in zip(
+            members, _evidence(feeder, prover, [rows[i] for i in members]), strict=True
+        ):
+            verdict = prover.settle(own, plain=i in plain)
+            proven[i] = replace(
+                rows[i], proof=verdict.proof, upper=verdict.upper, value=own.value,
+                evidence=verdict.evidence,
+            )  # fmt: skip
+            done += 1
+            options.progress("proof", done, total)
+    return proven
+
+
+def _evidence(feeder: Feeder, prover: Prover, rows: Sequence[HostingRow]) -> list[Evidence]:
+    """Certify rows that share one system."""
+    study = rows[0].study
+    assert study is not None
+    posed = study.posed[rows[0].posed]
+    technology = feeder.technology(rows[0].candidate.technology)
+    plants = plants_in(
+        [r.candidate for r in rows], rows[0].direction, case_scale(study.case, technology),
+        posed.shift, feeder.network.phases,
+    )  # fmt: skip
+    rating = np.array([r.rating for r in rows])
+    limit = np.array([r.limit for r in rows])
+    return prover.certify(posed.system, plants, rating, limit)
+
+
+def _plain_sample(members: list[int], feeder: Feeder, options: Options) -> set[int]:
+    """Rows for which the plain programme is solved too: a seeded sample, or all."""
+    size = feeder.settings.plain_sample
+    if options.plain or len(members) <= size:
+        return set(members)
+    drawn = np.random.default_rng(feeder.settings.seed)
+    return set(drawn.choice(np.array(members), size, replace=False).tolist())
+
+
 def rounded_down(feeder: Feeder, rating: float) -> float:
     """Round a rating down to the step of Settings, never up."""
     kw, step = feeder.kw(rating), feeder.settings.rounding_kw
     if step <= 0:
         return rating
     return math.floor(kw / step) * step / feeder.kw(1.0)
-
-
-def broken_limits(feeder: Feeder, study: CaseStudy) -> list[str]:
-    """Name the limits that are broken with nothing added: criterion, element, case."""
-    names = []
-    for posed in study.posed:
-        limits = posed.system.limits
-        for row in np.flatnonzero(posed.broken):
-            criterion = LIMIT_CRITERIA[limits.criterion[row]]
-            where = element_name(feeder, criterion, int(limits.element[row]) - posed.shift)
-            names.append(f"{criterion} at {where} in {study.case.name}")
-    return list(dict.fromkeys(names))
-
-
-def element_name(feeder: Feeder, criterion: Criterion, k: int) -> str:
-    """Name the node or branch a limit belongs to."""
-    edge = feeder.edges[k]
-    rated = (Criterion.LINE_RATING, Criterion.TRANSFORMER_RATING, Criterion.REGULATOR_RATING)
-    return edge.name if criterion in rated and edge is not None else feeder.nodes[k]
-
-
-def check_rows(
-    feeder: Feeder,
-    rows: Sequence[HostingRow],
-    studies: dict[str, tuple[CaseStudy, ...]],
-    options: Options,
-) -> list[HostingRow]:
-    """Check every published value by AC in every case, and that just above it fails.
-
-    A row that does not pass keeps its place and loses every number.
-    """
-    settings = feeder.settings
-    least = np.full(len(rows), np.inf)
-    above = np.full(len(rows), np.inf)
-    mismatch = np.zeros(len(rows))
-    numbered = [i for i, r in enumerate(rows) if r.state is not State.NOT_ANALYSED]
-    for way, cases in studies.items():
-        own = [i for i in numbered if rows[i].direction == way or _both(feeder, rows[i])]
-        for s, study in enumerate(cases):
-            by_scale: dict[float, list[int]] = {}
-            for i in own:
-                technology = feeder.technology(rows[i].candidate.technology)
-                by_scale.setdefault(case_scale(study.case, technology), []).append(i)
-            for scale, members in by_scale.items():
-                for cut in blocks(len(members), feeder.tree.size, settings):
-                    which = np.array(members)[cut]
-                    _check_block(feeder, rows, which, way, scale, study, least, above, mismatch)
-            options.progress(f"AC check {way}", s + 1, len(cases))
-    return [
-        _judged(row, least[i], above[i], mismatch[i], settings.mismatch_tolerance)
-        for i, row in enumerate(rows)
-    ]
-
-
-def _both(feeder: Feeder, row: HostingRow) -> bool:
-    return feeder.technology(row.candidate.technology).direction == BOTH
-
-
-def _check_block(
-    feeder: Feeder,
-    rows: Sequence[HostingRow],
-    which: Ints,
-    way: str,
-    scale: float,
-    study: CaseStudy,
-    least: Floats,
-    above: Floats,
-    mismatch: Floats,
-) -> None:
-    """Fold one case's slacks at the value, and just above it, into the running worst."""
-    settings = feeder.settings
-    value = np.array([rows[i].hosting for i in which])
-    over = np.array([rows[i].rating for i in which]) * (1 + settings.above_share)
-    candidates = [rows[i].candidate for i in which]
-    for posed in study.posed:
-        plants = plants_in(candidates, way, scale, posed.shift, feeder.network.phases)
-        real = (posed.system.limits.criterion >= 0)[:, None]
-        slack, point = slacks_with(posed.system, plants, value, settings)
-        least[which] = np.minimum(least[which], slack.min(axis=0, initial=np.inf, where=real))
-        mismatch[which] = np.maximum(mismatch[which], point.mismatch)
-        slack, _ = slacks_with(posed.system, plants, over, settings)
-        above[which] = np.minimum(above[which], slack.min(axis=0, initial=np.inf, where=real))
-
-
-def _judged(
-    row: HostingRow, least: float, above: float, mismatch: float, tolerance: float
-) -> HostingRow:
-    if row.state is State.NOT_ANALYSED:
-        return row
-    passes = least >= 0 and mismatch <= tolerance
-    passes = passes and (row.state is State.CAPPED or above < 0)
-    if passes:
-        return replace(row, mismatch=mismatch, slack=least)
-    state = row.state if row.state is not State.CAPPED else State.HOSTED
-    return replace(
-        row, state=state, proof=Proof.FAILED, criterion=Criterion.AC_CHECK, rating=math.nan,
-        hosting=math.nan, upper=math.nan, by_group=np.full(GROUPS, np.inf), mismatch=mismatch,
-    )  # fmt: skip

@@ -1,20 +1,17 @@
-"""Prove each first violation: recursion for all rows of a system at once, then the solver."""
+"""Prove first violations: recursion for all plants of a system at once, then the solver."""
 
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
-from typing import TYPE_CHECKING
 
 import numpy as np
 
-from feederhost.feeder.model import Feeder
 from feederhost.flow.limits import System, measure
 from feederhost.flow.network import OperatingPoint
 from feederhost.flow.search import Plants, drawn_power
 from feederhost.flow.sweep import sweep, tangent
-from feederhost.flow.tree import Floats
+from feederhost.flow.tree import Floats, Ints
 from feederhost.proof.bounds import upper_bound
 from feederhost.proof.branchflow import (
     BranchFlow,
@@ -28,12 +25,8 @@ from feederhost.proof.pricing import loss_prices
 from feederhost.proof.program import Programme, compile_programme, structure
 from feederhost.proof.solver import CLARABEL, ECOS, default_solver
 from feederhost.proof.valuing import Relaxed, solve_row
-from feederhost.schema import Proof, State
-from feederhost.study.cases import CaseStudy, case_scale, plant_draw
-from feederhost.study.options import Options
-
-if TYPE_CHECKING:
-    from feederhost.study.nodal import HostingRow
+from feederhost.schema import Proof
+from feederhost.settings import Settings
 
 
 @dataclass(frozen=True)
@@ -42,8 +35,12 @@ class Evidence:
 
     Attributes
     ----------
-    system, plant, flow, column
-        The binding system, the plant, the AC point in branch-flow form and the row's column.
+    system, plant, flow, seek, column
+        The binding system, the plant, the batch's AC points in branch-flow form, and the
+        row's column there.
+    rating, limit, value : float, int, float
+        Rating at the first violation, the limit row met (-1: the solution is lost), and what
+        is measured there.
     certificate : Certificate
         Of the whole batch; ``column`` picks the row.
     relaxed, plain : Relaxed or None
@@ -55,6 +52,9 @@ class Evidence:
     flow: BranchFlow
     seek: Seek
     column: int
+    rating: float
+    limit: int
+    value: float
     point: OperatingPoint
     certificate: Certificate
     relaxed: Relaxed | None = None
@@ -65,18 +65,25 @@ class Evidence:
         return float(values[self.column])
 
 
+@dataclass(frozen=True)
+class Verdict:
+    """Proof state of a row, the upper bound that goes with it, and the evidence."""
+
+    proof: Proof
+    upper: float
+    evidence: Evidence
+
+
 @dataclass
 class Prover:
-    """Proves rows; keeps the compiled programmes, so that none is rebuilt per row."""
+    """Proves first violations; keeps compiled programmes, so that none is rebuilt per row."""
 
-    feeder: Feeder
-    options: Options
+    settings: Settings
+    solver: str = ""
     programmes: dict[tuple[object, ...], Programme] = field(default_factory=dict)
 
-    @property
-    def solver(self) -> str:
-        """Name of the conic solver in use."""
-        return self.options.solver or default_solver()
+    def __post_init__(self) -> None:
+        self.solver = self.solver or default_solver()
 
     def programme(self, system: System, *, cuts: bool = False) -> Programme:
         """Return the compiled programme that fits a system."""
@@ -85,115 +92,73 @@ class Prover:
             self.programmes[key] = compile_programme(system, cuts=cuts)
         return self.programmes[key]
 
-    def prove(self, rows: Sequence[HostingRow]) -> list[HostingRow]:
-        """Return the rows with proof, upper bound and evidence."""
-        batches: dict[tuple[int, int], list[int]] = {}
-        for i, row in enumerate(rows):
-            if row.study is not None:
-                batches.setdefault((row.study.index, row.posed), []).append(i)
-        proven = list(rows)
-        hosted = sum(len(b) for b in batches.values())
-        sample = self._plain_sample([i for b in batches.values() for i in b])
-        done = 0
-        for members in batches.values():
-            certified = self._recursion([rows[i] for i in members])
-            for i, row in zip(members, certified, strict=True):
-                proven[i] = self._solved(row, i in sample)
-                done += 1
-                self.options.progress("proof", done, hosted)
-        return proven
+    def certify(
+        self, system: System, plants: Plants, rating: Floats, limit: Ints
+    ) -> list[Evidence]:
+        """Run the recursion for plants (m) of one system at their first violations.
 
-    def _plain_sample(self, members: list[int]) -> set[int]:
-        size = self.feeder.settings.plain_sample
-        if self.options.plain or len(members) <= size:
-            return set(members)
-        drawn = np.random.default_rng(self.feeder.settings.seed)
-        return set(drawn.choice(np.array(members), size, replace=False).tolist())
-
-    def _recursion(self, rows: Sequence[HostingRow]) -> list[HostingRow]:
-        """Certify rows that share one system."""
-        study, settings = rows[0].study, self.feeder.settings
-        assert study is not None
-        posed = study.posed[rows[0].posed]
-        system = posed.system
-        rating = np.array([r.rating for r in rows])
-        plants = self._plants(rows, study, posed.shift)
+        Parameters
+        ----------
+        rating : (m,) float
+        limit : (m,) int
+            Limit row met there; -1 where the solution is lost.
+        """
+        settings = self.settings
         power = drawn_power(system, plants, rating)
         point = sweep(system.network, system.loading, settings, power)
         change = np.zeros_like(power)
         change[plants.node, :, np.arange(rating.size)] = plants.draw
         moved = tangent(system.network, system.loading, settings, point, power, change)
         value = measure(system.network, system.limits, point)
-        # A row that ends where the solution is lost has no limit to price: limit -1.
-        limit = np.array([max(r.limit, 0) for r in rows])
-        seek = Seek(plants.node, plants.draw.sum(axis=1), limit)
+        seek = Seek(plants.node, plants.draw.sum(axis=1), np.maximum(limit, 0))
         flow = branch_flow(system, plants, point)
         prices = loss_prices(flow, system, seek, rating, settings)
         gradient = limit_gradient(flow, system, seek, reduced=False)
         slope = loss_current_slope(point, moved)
         certificate = certify(flow, seek, gradient, prices, slope, settings)
         return [
-            replace(
-                row,
-                value=float(value[row.limit, i]) if row.limit >= 0 else math.nan,
-                evidence=Evidence(
-                    system, plants.pick(np.array([i])), flow, seek, i, point, certificate
-                ),
+            Evidence(
+                system, plants.pick(np.array([i])), flow, seek, i, float(rating[i]),
+                int(limit[i]), float(value[limit[i], i]) if limit[i] >= 0 else math.nan,
+                point, certificate,
             )
-            for i, row in enumerate(rows)
-        ]
+            for i in range(rating.size)
+        ]  # fmt: skip
 
-    def _plants(self, rows: Sequence[HostingRow], study: CaseStudy, shift: int) -> Plants:
-        technology = self.feeder.technology(rows[0].candidate.technology)
-        scale = case_scale(study.case, technology)
-        draw = np.array([plant_draw(r.direction, r.candidate.reactive) for r in rows]) * scale
-        phases = self.feeder.network.phases
-        return Plants(
-            node=np.array([r.candidate.node + shift for r in rows]),
-            draw=np.repeat(draw[:, None] / phases, phases, axis=1),
-            cap=np.array([r.candidate.cap for r in rows]),
-        )
+    def settle(self, own: Evidence, *, plain: bool = False) -> Verdict:
+        """Hold the recursion against the conic solver and settle the proof.
 
-    def _solved(self, row: HostingRow, with_plain: bool) -> HostingRow:
-        """Hold the recursion against the conic solver and settle the proof."""
-        settings = self.feeder.settings
-        assert row.evidence is not None
-        own: Evidence = row.evidence
+        With ``plain`` the plain programme is solved too, for the record.
+        """
+        settings, cap = self.settings, float(own.plant.cap[0])
         programme = self.programme(own.system)
 
         def solve(prices: Floats, cap: float, solver: str = self.solver) -> Relaxed:
             return solve_row(
-                programme, own.system, own.flow, own.seek, own.column, prices,
-                row.rating, cap, solver, settings,
+                programme, own.system, own.flow, own.seek, own.column, prices, own.rating, cap,
+                solver, settings,
             )  # fmt: skip
 
         prices = own.certificate.prices[:, own.column]
         # The programme is convex: a cap that does not bind leaves its optimum where it is, and
         # a near one spares the solver numbers of very different size.
-        near = min(row.candidate.cap, settings.solver_room * row.rating)
-        relaxed = solve(prices, near) if row.limit >= 0 else None
-        if relaxed is not None and not self._agrees(relaxed, row) and self.solver == ECOS:
+        near = min(cap, settings.solver_room * own.rating) if own.rating > 0 else cap
+        relaxed = solve(prices, near) if own.limit >= 0 else None
+        if relaxed is not None and not self._agrees(relaxed, own) and self.solver == ECOS:
             # ECOS may call an inexact end clean; the second solver has the last word.
             relaxed = solve(prices, near, CLARABEL)
-        plain = solve(np.zeros_like(prices), row.candidate.cap) if with_plain else None
-        own = replace(own, relaxed=relaxed, plain=plain)
-        if (
-            relaxed is not None
-            and self._agrees(relaxed, row)
-            and bool(own.certificate.closes[own.column])
-        ):
-            return replace(row, evidence=own, proof=Proof.PROVEN, upper=row.rating)
+        solved = replace(
+            own, relaxed=relaxed, plain=solve(np.zeros_like(prices), cap) if plain else None
+        )
+        closes = bool(own.certificate.closes[own.column])
+        if relaxed is not None and closes and self._agrees(relaxed, own):
+            return Verdict(Proof.PROVEN, own.rating, solved)
         upper = upper_bound(
             self.programme(own.system, cuts=True), own.system, own.flow, own.seek, own.column,
-            row.rating, row.candidate.cap, self.solver, settings,
+            own.rating, cap, self.solver, settings,
         )  # fmt: skip
-        return replace(row, evidence=own, proof=Proof.BRACKETED, upper=upper)
+        return Verdict(Proof.BRACKETED, upper, solved)
 
-    def _agrees(self, relaxed: Relaxed, row: HostingRow) -> bool:
-        tolerance = self.feeder.settings.solver_agreement * row.rating
-        return bool(abs(relaxed.g - row.rating) <= tolerance)
-
-
-def hosted(row: HostingRow) -> bool:
-    """Whether the row carries a first violation with evidence."""
-    return row.state in (State.HOSTED, State.HOSTED_BASE_VIOLATION) and row.evidence is not None
+    def _agrees(self, relaxed: Relaxed, own: Evidence) -> bool:
+        gap = abs(relaxed.g - own.rating)
+        return bool(gap <= self.settings.solver_agreement * own.rating)

@@ -14,7 +14,7 @@ from feederhost.errors import Severity
 from feederhost.study.base import base_cases_table, base_table
 from feederhost.study.exactness import conditions_table
 from feederhost.study.load import Loaded, load_feeder
-from feederhost.study.nodal import Hosting, base_solutions, host
+from feederhost.study.nodal import base_solutions, host
 from feederhost.study.options import Options
 from feederhost.study.results import (
     audit_table,
@@ -25,6 +25,7 @@ from feederhost.study.results import (
     relaxation_table,
     trusted,
 )
+from feederhost.study.rows import Hosting
 from feederhost.study.summary import (
     cautions,
     flags_for_all,

@@ -15,7 +15,7 @@ from feederhost.flow.limits import Quantity
 from feederhost.flow.search import WATCHED
 from feederhost.schema import BASES, LIMIT_CRITERIA, RESULT, Criterion, Proof, State
 from feederhost.study.cases import case_scale
-from feederhost.study.nodal import Hosting, HostingRow, element_name
+from feederhost.study.rows import Hosting, HostingRow, element_name
 
 _HOSTED = (State.HOSTED, State.HOSTED_BASE_VIOLATION)
 

@@ -15,9 +15,9 @@ from feederhost import __version__
 from feederhost.feeder.model import Feeder
 from feederhost.schema import RESULT, Proof, State
 from feederhost.study.load import Loaded
-from feederhost.study.nodal import Hosting, HostingRow
 from feederhost.study.options import Options
 from feederhost.study.results import counts
+from feederhost.study.rows import Hosting, HostingRow
 
 NOT_PHASED = "not valid on single-phase laterals: no phases are given, judged balanced"
 CAUTIONS = (
