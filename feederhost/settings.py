@@ -104,6 +104,13 @@ class Settings:
     search_first_share: float = _setting(
         1e-4, "-", "shortest step of the search, as a share of the cap", _METHOD
     )
+    queue_step_share: float = _setting(
+        0.25, "-", "longest step of the search for one request, as a share of its reach", _METHOD
+    )
+    swing_tries: int = _setting(
+        9, "-", "sizes of storage tried side by side when its swing is located", _METHOD
+    )
+    swing_rounds: int = _setting(12, "-", "most rounds of locating a swing", _METHOD)
     search_lost_share: float = _setting(
         0.01, "-", "how closely the loss of a solution is located once a limit has been met, "
         "as a share of the cap", _METHOD,

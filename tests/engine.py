@@ -6,13 +6,17 @@ Tables are what ``judge`` reads too: sheet name to a list of rows.  Every answer
 from __future__ import annotations
 
 import json
+import sys
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from functools import cache
+from pathlib import Path
 from typing import Any
+from unittest.mock import patch
 
 import numpy as np
 import pandas as pd
+import pytest
 from feederhost.errors import fatal
 from feederhost.feeder.audit import audit
 from feederhost.feeder.model import Feeder
@@ -20,6 +24,7 @@ from feederhost.feeder.perunit import build_feeder
 from feederhost.feeder.tables import Tables, check_tables
 from feederhost.feeder.topology import root_feeder
 from feederhost.schema import LIMIT_CRITERIA
+from feederhost.study import reports
 from feederhost.study.load import Loaded
 from feederhost.study.nodal import Hosting, HostingRow, host
 from feederhost.study.options import Options
@@ -96,4 +101,62 @@ def per_criterion(row: HostingRow) -> dict[str, float]:
         str(c): 1000 * float(row.by_group[g])  # the power base of the core is 1 MVA
         for g, c in enumerate(LIMIT_CRITERIA)
         if np.isfinite(row.by_group[g])
+    }
+
+
+def report(
+    tables: Sheets, options: Options | None = None, *, check: bool = False, **settings: object
+) -> reports.Report:
+    """Return the whole answer of `host` (or `check`) to tables, without a file in between."""
+    loaded = load(tables)
+    feeder = replace(loaded.feeder, settings=replace(loaded.feeder.settings, **settings))
+    with patch.object(reports, "load_feeder", lambda path: replace(loaded, feeder=feeder)):
+        answer_of = reports.check_report if check else reports.host_report
+        return answer_of(Path("tables"), options or Options())
+
+
+def line_of(frame: pd.DataFrame, node: str, technology: str) -> dict[str, Any]:
+    """Return the only row of a result sheet for a node and technology; blank cells are None."""
+    own = frame[(frame["node"] == node) & (frame["technology"] == technology)]
+    (line,) = own.to_dict("records")
+    return {k: None if v == "" or pd.isna(v) else v for k, v in line.items()}
+
+
+def swap(monkeypatch: pytest.MonkeyPatch, old: Any, new: Any, room: str = "study") -> None:
+    """Put ``new`` where a room of the package has ``old``, in whichever module that is."""
+    places = [
+        (module, name)
+        for path, module in list(sys.modules.items())
+        if path.startswith(f"feederhost.{room}.")
+        for name, value in vars(module).items()
+        if value is old
+    ]
+    assert places, f"no module of {room} uses {old.__name__}"
+    for module, name in places:
+        monkeypatch.setattr(module, name, new)
+
+
+def two_bus(
+    z_ohm: complex = 5 + 5j,
+    *,
+    rating_a: float | str = "unlimited",
+    limits: Mapping[str, float] | None = None,
+    source: Mapping[str, Any] | None = None,
+    case: Mapping[str, Any] | None = None,
+    **sheets: list[dict[str, Any]],
+) -> dict[str, list[dict[str, Any]]]:
+    """Return one line from S to N at 10 kV, so that 100 ohm is 1 pu and 57.735 A is 1 pu.
+
+    One case in which all runs; voltage change off; looked at up to 20 MW.
+    """
+    loose = {"voltage_change_mv_pct": 0, "voltage_change_lv_pct": 0, "search_cap_kw": 20000}
+    every = {"case": "only", "load_scale": 1, "pv_scale": 1, "ev_scale": 1}
+    line = {"line": "L", "from_node": "S", "to_node": "N", "length_km": 1.0,
+            "r1_ohm": z_ohm.real, "x1_ohm": z_ohm.imag, "rating_a": rating_a}  # fmt: skip
+    return {
+        "source": [{"node": "S", "kv": 10, "voltage_pu": 1.0, **(source or {})}],
+        "lines": [line],
+        "cases": [every | dict(case or {})],
+        "limits": [{"limit": k, "value": v} for k, v in (loose | dict(limits or {})).items()],
+        **sheets,
     }

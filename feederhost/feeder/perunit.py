@@ -127,7 +127,7 @@ def _loads(
     return power, current, shunt
 
 
-def _reactive(cells: Row, direction: str, otherwise: float) -> float:
+def reactive_share(cells: Row, direction: str, otherwise: float) -> float:
     """Reactive share of a plant: injected per kW exported, drawn per kW imported."""
     if math.isnan(cells.get("power_factor", math.nan)):
         return otherwise
@@ -145,7 +145,7 @@ def _technologies(tables: Tables) -> tuple[Technology, ...]:
         Technology(
             name=name,
             direction=cells["direction"],
-            reactive=_reactive(cells, cells["direction"], 0.0),
+            reactive=reactive_share(cells, cells["direction"], 0.0),
             scale=str(cells.get("scale", "")),
             coincidence=float(cells.get("coincidence", 1.0)),
         )
@@ -168,7 +168,7 @@ def _generators(
         technology=np.array(which, dtype=np.intp),
         rating=np.array([per_unit(cells["kw"], settings) for cells in rows], dtype=float),
         reactive=np.array(
-            [_reactive(c, t.direction, t.reactive) for c, t in zip(rows, own, strict=True)],
+            [reactive_share(c, t.direction, t.reactive) for c, t in zip(rows, own, strict=True)],
             dtype=float,
         ),
     )
@@ -232,7 +232,7 @@ def _candidates(
         Candidate(
             node=number[cells["node"]],
             technology=name,
-            reactive=_reactive(cells, by_name[name].direction, by_name[name].reactive),
+            reactive=reactive_share(cells, by_name[name].direction, by_name[name].reactive),
             cap=cap if math.isnan(cells["max_kw"]) else per_unit(cells["max_kw"], settings),
         )
         for cells in rows

@@ -132,16 +132,19 @@ def blocks(columns: int, rows: int, settings: Settings) -> Iterator[np.ndarray]:
         yield np.arange(first, min(first + width, columns))
 
 
-def first_violations(system: System, plants: Plants, settings: Settings) -> FirstViolations:
+def first_violations(
+    system: System, plants: Plants, settings: Settings, *, first_only: bool = False
+) -> FirstViolations:
     """Find, for every plant and criterion, the first violation as the rating grows from zero.
 
+    With ``first_only`` a plant is done once any limit is met: what comes later is left open.
     The system must hold every limit at rating zero: what is broken there must be relaxed first.
     """
     m = plants.node.size
     rating = np.full((GROUPS, m), np.inf)
     row = np.full((GROUPS, m), -1)
     for columns in blocks(m, system.network.tree.size, settings):
-        _search_block(system, plants, columns, settings, rating, row)
+        _search_block(system, plants, columns, settings, first_only, rating, row)
     return FirstViolations(rating, row)
 
 
@@ -150,6 +153,7 @@ def _search_block(
     plants: Plants,
     columns: np.ndarray,
     settings: Settings,
+    first_only: bool,
     rating: Floats,
     row: Ints,
 ) -> None:
@@ -164,7 +168,8 @@ def _search_block(
         # A watched quantity may start beyond its bound; a limit may not (its rows are relaxed).
         at_once = broken[group == c].any(axis=0)
         rating[c, columns[at_once]] = 0.0
-        row[c, columns[at_once]] = np.flatnonzero(group == c)[0]
+        own = np.flatnonzero(group == c)
+        row[c, columns[at_once]] = own[here.slack[own][:, at_once].argmin(axis=0)]
     lost = ~here.point.solved
     rating[NO_SOLUTION, columns[lost]] = 0.0
     step = np.full(columns.size, np.inf)
@@ -201,6 +206,8 @@ def _search_block(
         here = _merge(here, there, sure)
         done = (g[live] >= cap[live]) | np.isfinite(rating[:, pick])[present].all(axis=0)
         done |= np.isfinite(rating[NO_SOLUTION, pick])
+        if first_only:
+            done |= np.isfinite(rating[:WATCHED, pick]).any(axis=0)
         keep = np.flatnonzero(~done)
         live, here = live[keep], _take(here, keep)
     _refine(system, plants, group, found, settings, rating, row)

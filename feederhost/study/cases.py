@@ -138,7 +138,7 @@ def study_case(feeder: Feeder, index: int, found: Solved, direction: str) -> Cas
     own = steady_limits(feeder, held, case, direction)
     if feeder.z_source is None or not np.isfinite(feeder.change).any():
         change = change_limits(feeder, held.network.gain, held.point, 0)
-        both = System(held.network, held.loading, _join(own, change))
+        both = System(held.network, held.loading, join_limits(own, change))
         posed: tuple[Posed, ...] = (_pose(feeder, held, both, 0),)
     else:
         posed = (
@@ -194,7 +194,7 @@ def steady_limits(feeder: Feeder, held: Solved, case: Case, direction: str) -> L
             rows.append(_block(code(criterion), quantity, source, upper, np.array([bound])))
     if direction == EXPORT:
         rows.append(_block(-1, head, source, False, np.zeros(1)))
-    return _join(*rows, bank_other=case.bank_other)
+    return join_limits(*rows, bank_other=case.bank_other)
 
 
 def change_limits(feeder: Feeder, gain: Floats, base: OperatingPoint, shift: int) -> Limits:
@@ -209,7 +209,7 @@ def change_limits(feeder: Feeder, gain: Floats, base: OperatingPoint, shift: int
     size = np.abs(base.V[k, 0, 0])
     step = allowed / gain[k, 0]
     code = LIMIT_CRITERIA.index(Criterion.VOLTAGE_CHANGE)
-    return _join(
+    return join_limits(
         _block(code, Quantity.VOLTAGE, k, True, (size + step) ** 2),
         _block(code, Quantity.VOLTAGE, k, False, np.maximum(size - step, 0.0) ** 2),
     )
@@ -233,7 +233,8 @@ def _block(
     )
 
 
-def _join(*parts: Limits, bank_other: complex | None = None) -> Limits:
+def join_limits(*parts: Limits, bank_other: complex | None = None) -> Limits:
+    """Put limit rows one after the other."""
     names = ("criterion", "quantity", "element", "phase", "upper", "bound")
     other = parts[0].bank_other if bank_other is None else bank_other
     joined = {name: np.concatenate([getattr(p, name) for p in parts]) for name in names}
