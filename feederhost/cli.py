@@ -15,7 +15,7 @@ import click
 
 from feederhost import __version__
 from feederhost.errors import FeederhostError, InputError, OutputError, fatal
-from feederhost.terminal import ProgressLine, as_json, check_lines, host_lines
+from feederhost.terminal import ProgressLine, as_json, check_lines, host_lines, screen_lines
 
 if TYPE_CHECKING:
     from feederhost.study.reports import Report
@@ -160,10 +160,82 @@ def host(
     return _run(host_report, host_lines, feeder, output, make, json_out, quiet, as_csv)
 
 
+@main.command()
+@click.argument("feeder", type=_FEEDER)
+@click.option("-o", "--output", type=_FEEDER, required=True, help="Result workbook to write.")
+@click.option(
+    "--reserve",
+    type=click.Choice(["fitting", "asked", "none"]),
+    default="fitting",
+    show_default=True,
+    help="Size at which earlier requests stand in place.",
+)
+@click.option("--independent", is_flag=True, help="Judge each request alone (--reserve none).")
+@click.option(
+    "--remedies/--no-remedies",
+    default=True,
+    show_default=True,
+    help="Look for what would make a request fit.",
+)
+@click.option("--letters", type=_FEEDER, help="Folder for one plain-text draft per request.")
+@click.option("--resume", is_flag=True, help="Take up an interrupted run of the same input.")
+@click.option(
+    "--solver",
+    type=click.Choice(["ecos", "clarabel"]),
+    default=None,
+    help="Conic solver to hold the proof against.",
+)
+@_output_options
+@_guarded
+def screen(
+    feeder: Path,
+    output: Path,
+    reserve: str,
+    independent: bool,
+    remedies: bool,
+    letters: Path | None,
+    resume: bool,
+    solver: str | None,
+    json_out: bool,
+    quiet: bool,
+    as_csv: bool,
+) -> int:
+    """Answer every connection request of FEEDER in order, with number and reason.
+
+    Exit code 0: every answer is proven or needs no proof. 4: some answer is not, or has a data
+    fault; the result is written all the same. 3: fatal findings outside the requests.
+    """
+    from feederhost.study.journal import journal_of
+    from feederhost.study.options import Options
+    from feederhost.study.queue_report import screen_report, write_letters
+
+    make = functools.partial(
+        Options,
+        reserve="none" if independent else reserve,
+        remedies=remedies,
+        resume=resume,
+        solver=solver or "",
+    )
+    report_of = functools.partial(screen_report, journal=journal_of(output))
+    code = _run(
+        report_of,
+        screen_lines,
+        feeder,
+        output,
+        make,
+        json_out,
+        quiet,
+        as_csv,
+        lambda report: write_letters(report, letters),
+    )
+    journal_of(output).unlink(missing_ok=True)
+    return code
+
+
 def _run(
     report_of: Callable[..., Report], lines_of: Callable[[dict[str, Any]], list[str]],
     feeder: Path, output: Path | None, make_options: Callable[..., Any], json_out: bool,
-    quiet: bool, as_csv: bool,
+    quiet: bool, as_csv: bool, afterwards: Callable[[Report], None] = lambda _: None,
 ) -> int:  # fmt: skip
     """Run one report: progress, output file, terminal; fatal findings leave their audit only."""
     from feederhost.sheets.writing import write_result
@@ -181,6 +253,7 @@ def _run(
         raise
     if output is not None:
         write_result(report.tables, output, as_csv=as_csv)
+    afterwards(report)
     if json_out:
         click.echo(as_json(report.overview | {"exit_code": report.exit_code}))
     elif not quiet:

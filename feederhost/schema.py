@@ -468,6 +468,17 @@ class Proof(StrEnum):
     NONE = ""
 
 
+class Answer(StrEnum):
+    """What a connection request is told."""
+
+    FITS = "fits"
+    FITS_SCREENS_OPEN = "fits_screens_open"
+    FITS_WITH_REMEDY = "fits_with_remedy"
+    FITS_UP_TO = "fits_up_to"
+    DOES_NOT_FIT = "does_not_fit"
+    DATA_FAULT = "data_fault"
+
+
 @dataclass(frozen=True)
 class Output:
     """One result sheet: columns with the meaning shown as header comment, number formats."""
@@ -547,6 +558,7 @@ RESULT: dict[str, Output] = {
                 ("objective_margin", "rise of the priced objective per unit of rating"),
                 ("plain_kw", "optimum of the plain programme, kW: not a capacity"),
                 ("plain_fictitious_loss_kw", "loss the plain programme invents, kW"),
+                ("plain_outcome", "why the plain solution is not an operating point to publish"),
             ),
             banner="solver record: not a capacity",
         ),
@@ -617,6 +629,95 @@ RESULT: dict[str, Output] = {
                 ("plant_node", "node of the plant"),
                 ("v_min_pu", "lower limit of the node, pu"),
                 ("v_max_pu", "upper limit of the node, pu"),
+            ),
+        ),
+        Output(
+            "requests",
+            "every request answered, in order",
+            (
+                ("request", "request id"),
+                ("order", "place in the queue"),
+                ("received", "date received"),
+                ("node", "node it connects to"),
+                ("technology", "technologies of the site"),
+                ("phases", "phases; blank: balanced"),
+                ("asked_kw", "AC rating asked for, kW"),
+                (
+                    "answer",
+                    "fits, fits_screens_open, fits_with_remedy, fits_up_to, does_not_fit "
+                    "or data_fault",
+                ),
+                ("fits_kw", "size that fits without a remedy, kW; blank where not published"),
+                ("criterion", "what is met first as it grows"),
+                ("element", "where that is"),
+                ("case", "the case in which it is met"),
+                ("value_at_limit", "measured quantity there"),
+                ("limit_value", "the limit it meets"),
+                ("unit", "unit of both"),
+                ("proof", "how far the number can be trusted"),
+                ("depends_on", "earlier requests whose removal alone would change the answer"),
+                ("provisional_on", "earlier requests that do not fit as asked, or have a fault"),
+                ("screens_failed", "rule screens that failed"),
+                ("screens_open", "rule screens that lack data"),
+                ("best_remedy", "first remedy that carries most"),
+                ("remedy_kw", "size it carries, kW"),
+                ("cost_low", "low end of its cost"),
+                ("cost_high", "high end of its cost"),
+                ("currency", "currency and price year"),
+                ("input_grade", "worst basis of the data used"),
+                ("flags", "what to know about this request"),
+            ),
+        ),
+        Output(
+            "screens",
+            "rule screens of every request",
+            (
+                ("request", "request id"),
+                ("screen", "name of the screen"),
+                ("quantity", "measured quantity"),
+                ("threshold", "threshold it is held to"),
+                ("unit", "unit of both"),
+                ("verdict", "pass, fail or not assessed"),
+                ("missing", "what is missing where it is not assessed"),
+                ("source", "where the rule stands"),
+            ),
+        ),
+        Output(
+            "remedies",
+            "what would make a request fit, each re-proven by AC with the queue in place",
+            (
+                ("request", "request id"),
+                ("remedy", "kind of remedy"),
+                ("setting", "what would be set or built"),
+                ("kw", "size it carries, kW"),
+                ("criterion", "what stops it then; blank: carries what is asked"),
+                ("proof", "how far the number can be trusted"),
+                ("energy_lost_mwh", "energy lost in a year, MWh"),
+                ("cost_low", "low end of the cost"),
+                ("cost_high", "high end of the cost"),
+                ("currency", "currency and price year"),
+                ("note", "what to know about it"),
+            ),
+        ),
+        Output(
+            "queue",
+            "what each request leaves for those behind it",
+            (
+                ("order", "place in the queue"),
+                ("request", "request id"),
+                ("reserved_kw", "size later requests find in place, kW"),
+                ("head_room_kw", "what would still fit at its node beyond that, kW"),
+            ),
+        ),
+        Output(
+            "signoff",
+            "assumptions and exceptions, for the engineer to accept or refuse",
+            (
+                ("assumption", "assumption or exception"),
+                ("value", "its value"),
+                ("accepted_by", "left for the engineer"),
+                ("date", "left for the engineer"),
+                ("reason", "left for the engineer"),
             ),
         ),
         Output("run", "versions, settings and tolerances", (("key", "what"), ("value", "value"))),

@@ -22,6 +22,10 @@ _PROJECT = "project choice"
 _METHOD = "project choice; see the method notes in DEVELOPERS.md"
 
 
+def _sgip(section: str) -> str:
+    return f"FERC pro forma SGIP section {section} (as quoted in NREL/TP-6A20-72102)"
+
+
 @dataclass(frozen=True)
 class Settings:
     """All limits and tolerances of one run; frozen, printed on the ``run`` sheet."""
@@ -72,6 +76,47 @@ class Settings:
         1.0, "-", "1: regulators held at the band edge that is worse; 0: at the tap found",
         "common practice: generation runs at setpoint + half the bandwidth", True,
     )  # fmt: skip
+    screen_peak_pct: float = _setting(
+        15.0, "%", "screen: generation over the annual peak load of a line section",
+        _sgip("2.2.1.2"), True,
+    )  # fmt: skip
+    screen_minimum_pct: float = _setting(
+        100.0, "%", "screen: generation over the minimum load of a line section, to stay below",
+        _sgip("2.4.4.1") + "; section number from memory", True,
+    )  # fmt: skip
+    screen_fault_pct: float = _setting(
+        10.0, "%", "screen: fault current of all generation over that of the source",
+        _sgip("2.2.1.4"), True,
+    )  # fmt: skip
+    screen_interrupting_pct: float = _setting(
+        87.5, "%", "screen: fault current over the interrupting capability of a device",
+        _sgip("2.2.1.5"), True,
+    )  # fmt: skip
+    screen_secondary_kw: float = _setting(
+        20.0, "kW", "screen: generation on a shared single-phase secondary",
+        _sgip("2.2.1.7"), True,
+    )  # fmt: skip
+    screen_imbalance_pct: float = _setting(
+        20.0, "%", "screen: imbalance of a 240 V centre-tapped service over the transformer rating",
+        _sgip("2.2.1.8"), True,
+    )  # fmt: skip
+    screen_centre_tap_kv: float = _setting(
+        0.25, "kV", "screen: services above this are not 240 V centre-tapped",
+        "project choice, to apply " + _sgip("2.2.1.8"), True,
+    )  # fmt: skip
+    screen_inverter_pu: float = _setting(
+        1.2, "pu", "screen: fault current of an inverter over its rated current, where "
+        "`technologies` gives none",
+        "common practice: 1.0 to 1.2 beyond the first cycle", True,
+    )  # fmt: skip
+    screen_rotating_pu: float = _setting(
+        5.0, "pu", "screen: the same for a rotating machine",
+        "common practice: 5 to 6 for synchronous machines", True,
+    )  # fmt: skip
+    screen_prefault_pu: float = _setting(
+        1.0, "pu", "screen: voltage before a fault, at the place of the fault",
+        "common practice: nominal voltage", True,
+    )  # fmt: skip
 
     # AC power flow.
     base_mva: float = _setting(1.0, "MVA", "power base of the per-unit core", _PROJECT)
@@ -106,6 +151,12 @@ class Settings:
     )
     queue_step_share: float = _setting(
         0.25, "-", "longest step of the search for one request, as a share of its reach", _METHOD
+    )
+    rounding_slack: float = _setting(
+        1e-12, "pu", "slack below zero that counts as rounding, not as a violation", _METHOD
+    )
+    tiny_rating: float = _setting(
+        1e-7, "pu", "rating that stands for just above zero in an AC check", _METHOD
     )
     swing_tries: int = _setting(
         9, "-", "sizes of storage tried side by side when its swing is located", _METHOD
@@ -176,6 +227,9 @@ class Settings:
     above_share: float = _setting(
         1e-4, "-", "how far above the value a violation must be seen (1.0001 x)", _METHOD
     )
+    range_limit: float = _setting(
+        1e6, "-", "flow range beyond which cuts are given up, over the largest power", _METHOD
+    )
     bound_rounds: int = _setting(
         24, "-", "most halvings when an upper bound is tightened by cuts", _METHOD
     )
@@ -184,9 +238,53 @@ class Settings:
     )
     seed: int = _setting(20, "-", "seed of every sample drawn", _PROJECT)
 
+    # Remedies.
+    power_factor_lowest: float = _setting(
+        0.90, "-", "lowest absorbing power factor proposed as a remedy",
+        "IEEE 1547-2018 clause 5.2: 44 % of rated kVA at full output (secondary copy seen)",
+    )  # fmt: skip
+    power_factor_step: float = _setting(0.01, "-", "step between the power factors tried", _PROJECT)
+    curve_damping: float = _setting(
+        0.5, "-", "share of the gap to its curve that an inverter closes per round", _METHOD
+    )
+    curve_tolerance: float = _setting(
+        1e-9, "pu", "gap between power and curve at which an inverter has settled", _METHOD
+    )
+    curve_rounds: int = _setting(
+        120, "-", "rounds after which an inverter that has not settled hunts", _METHOD
+    )
+    curve_sweep_share: float = _setting(
+        0.01, "-", "voltage step at which a sweep under curves has settled, over the smallest gap "
+        "to a curve, both in pu", _METHOD,
+    )  # fmt: skip
+    curve_outputs: int = _setting(
+        11, "-", "outputs from zero to full at which a curve is looked at, per size", _METHOD
+    )
+    var_full_output: float = _setting(
+        0.2, "-", "share of rated output below which reactive power falls off in proportion",
+        "IEEE 1547-2018 clause 5.2 (secondary copy seen)",
+    )  # fmt: skip
+    schedule_cases: int = _setting(
+        288, "-", "fewest cases for a schedule: every hour of the day in every month", _PROJECT
+    )
+    setpoint_step: float = _setting(
+        0.005, "pu", "step between the regulator setpoints tried", _PROJECT
+    )
+    tap_step_pct: float = _setting(
+        2.5, "%", "step of a transformer's off-circuit taps",
+        "common practice: +-2 x 2.5 % (manufacturer's page seen)",
+    )  # fmt: skip
+    tap_positions: int = _setting(
+        2, "-", "off-circuit taps of a transformer to either side of 1",
+        "common practice: +-2 x 2.5 % (manufacturer's page seen)",
+    )  # fmt: skip
+
     # Reading and reporting.
     base_cells: int = _setting(
         200_000, "-", "cases x nodes up to which `base` lists everything", _PROJECT
+    )
+    flag_elements: int = _setting(
+        12, "-", "broken elements named in the flags of a row before '... more'", _PROJECT
     )
     cap_loads: float = _setting(10.0, "-", "default search cap over peak load", _PROJECT)
     cap_least_kw: float = _setting(100.0, "kW", "least default search cap", _PROJECT)
@@ -194,6 +292,14 @@ class Settings:
         0.01, "-", "how far the zip shares of a load may sum from one", _PROJECT
     )
     shared_kv: float = _setting(1.0, "kV", "nodes up to this are low voltage", "IEC 60038")
+    screen_tolerance: float = _setting(
+        1e-9, "-", "share by which sums of ratings may differ and still be equal in a screen",
+        _PROJECT,
+    )  # fmt: skip
+    screen_slope_spread: float = _setting(
+        1.5, "-", "cases whose loss of generation, times the steepest voltage change per kW seen "
+        "and this, stays below the worst change found are left out of that screen", _METHOD,
+    )  # fmt: skip
 
 
 def sheet_settings() -> tuple[Field[Any], ...]:

@@ -140,6 +140,38 @@ def check_lines(overview: dict[str, Any]) -> list[str]:
     return lines + _warned(overview)
 
 
+def screen_lines(overview: dict[str, Any]) -> list[str]:
+    """Return the summary of a `screen` run, at most 79 columns wide."""
+    lines = [*_title(overview), ""]
+    lines.append(f"{'request':<14}{'node':<10}{'asked kW':>10}{'fits kW':>10}  answer")
+    for row in overview["requests"]:
+        asked, fits = (_figure(row[key]) for key in ("asked_kw", "fits_kw"))
+        lines.append(
+            f"{_short(row['request'], 13):<14}{_short(row['node'], 9):<10}{asked:>10}{fits:>10}"
+            f"  {row['answer']}"
+        )
+        why = [str(row["criterion"] or ""), f"at {row['element']}" if row["element"] else ""]
+        why.append(f"in {row['case']}" if row["case"] else "")
+        told = " ".join(w for w in why if w)
+        if told:
+            lines += textwrap.wrap(
+                told, _WIDTH, initial_indent=" " * 46, subsequent_indent=" " * 46
+            )
+    lines.append("")
+    lines.append("answers   " + _tally(overview["answer"]))
+    lines.append("proof     " + _tally(overview["proof"]))
+    lines.append(f"reserve   {overview['reserve']}")
+    lines += [f"withdrawn {text}" for text in overview["withdrawn"]]
+    return lines + _warned(overview) + _cautions(overview)
+
+
+def _figure(value: object) -> str:
+    """Return a number of kW as shown; blank where there is none."""
+    if not isinstance(value, int | float) or not math.isfinite(value):
+        return "-"
+    return f"{value:,.1f}".removesuffix(".0")
+
+
 def _title(overview: dict[str, Any]) -> list[str]:
     date = overview["data_date"] or "not given"
     number = len(overview["cases"])

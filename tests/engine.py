@@ -1,6 +1,6 @@
 """The engine's answer to workbook-form tables, without a file in between.
 
-Tables are what ``judge`` reads too: sheet name to a list of rows.  Every answer is computed once.
+Tables are what ``judge`` reads too: sheet name to a list of rows.  The last answers are kept.
 """
 
 from __future__ import annotations
@@ -9,7 +9,7 @@ import json
 import sys
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
-from functools import cache
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 from unittest.mock import patch
@@ -43,9 +43,13 @@ def raw_sheets(tables: Sheets) -> dict[str, pd.DataFrame]:
     return raw
 
 
-def load(tables: Sheets, name: str = "tables") -> Loaded:
-    """Return the feeder of tables that have no fatal finding, with all findings."""
+def load(tables: Sheets, name: str = "tables", **settings: object) -> Loaded:
+    """Return the feeder of tables that have no fatal finding, with all findings.
+
+    ``settings`` replaces fields of its Settings, as if the rows of `limits` had said so.
+    """
     checked: Tables = check_tables(raw_sheets(tables))
+    checked = replace(checked, settings=replace(checked.settings, **settings))
     topology, rooted = root_feeder(checked)
     findings = [*checked.findings, *rooted]
     if topology is not None:
@@ -56,12 +60,8 @@ def load(tables: Sheets, name: str = "tables") -> Loaded:
 
 
 def build(tables: Sheets, **settings: object) -> Feeder:
-    """Return the feeder; ``settings`` replaces fields of its Settings afterwards.
-
-    Rows of `limits` belong in the tables: what they turn into is settled while reading.
-    """
-    feeder = load(tables).feeder
-    return replace(feeder, settings=replace(feeder.settings, **settings))
+    """Return the feeder of tables."""
+    return load(tables, **settings).feeder
 
 
 def answer(tables: Sheets, options: Options | None = None, **settings: object) -> Hosting:
@@ -70,7 +70,7 @@ def answer(tables: Sheets, options: Options | None = None, **settings: object) -
     return _answer(json.dumps([tables, settings], sort_keys=True), options or Options())
 
 
-@cache
+@lru_cache(maxsize=16)
 def _answer(asked: str, options: Options) -> Hosting:
     tables, settings = json.loads(asked)
     return host(build(tables, **settings), options)
@@ -108,9 +108,8 @@ def report(
     tables: Sheets, options: Options | None = None, *, check: bool = False, **settings: object
 ) -> reports.Report:
     """Return the whole answer of `host` (or `check`) to tables, without a file in between."""
-    loaded = load(tables)
-    feeder = replace(loaded.feeder, settings=replace(loaded.feeder.settings, **settings))
-    with patch.object(reports, "load_feeder", lambda path: replace(loaded, feeder=feeder)):
+    loaded = load(tables, **settings)
+    with patch.object(reports, "load_feeder", lambda path: loaded):
         answer_of = reports.check_report if check else reports.host_report
         return answer_of(Path("tables"), options or Options())
 

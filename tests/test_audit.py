@@ -43,6 +43,14 @@ KM = "line, from_node, to_node, length_km, r1_ohm_per_km, x1_ohm_per_km, rating_
         (0.696, 0.518, None),
         (0.01, 0.05, None),
         (6.0, 0.3, None),
+        (0.3, 0.02, None),
+        (0.3, 0.65, None),
+        (0.05, 0.4, None),
+        (0.3, 0.019, "ohm per kft entered as per km?"),
+        (0.0031, 0.1, "ohm per kft entered as per km?"),
+        (9.0, 0.035, "ohm per mile entered as per km?"),
+        (31.6, 0.106, "ohm per mile entered as per kft?"),
+        (0.05, 0.401, "check that r and x are not swapped"),
         (0.009, 0.05, "ohm per kft entered as per km?"),
         (0.004, 0.12, "ohm per kft entered as per km?"),
         (6.1, 0.7, "ohm per mile entered as per km?"),
@@ -71,6 +79,7 @@ def test_impedance_in_all_is_judged_per_km(x, column):
         "line, from_node, to_node, length_km, r1_ohm, x1_ohm, rating_a",
         ["L1", "S", "A", 2, 1.4, x * 2, 300],
         ["L2", "A", "B", None, 1.4, 99, 300],
+        ["L3", "B", "C", 0, 1.4, 99, 300],
     )
     found = audited(lines=table)
     assert places(found) == [("warning", "lines", 2, column, f"{x * 2:g}" if x < 1 else "1.4")]
@@ -89,7 +98,28 @@ def test_conductor_is_judged_once_and_where_it_is_used(used, wanted):
     assert places(found) == [("warning", "conductors", 2, "r1_ohm_per_km", "0.3")] * wanted
 
 
+def test_conductor_that_serves_both_voltages_is_judged_by_the_higher():
+    table = sheet(
+        "line, from_node, to_node, length_km, conductor",
+        ["L1", "S", "A", 1, "W"],
+        ["L2", "B", "C", 0.1, "W"],
+    )
+    found = audited(
+        lines=table,
+        transformers=sheet(TRANSFORMER, ["T", "A", "B", 500, 12.47, 0.48, 2, 1]),
+        conductors=sheet(LIBRARY, ["W", 0.3, 0.01, 300]),
+    )
+    assert places(found) == [("warning", "conductors", 2, "r1_ohm_per_km", "0.3")]
+
+
+def test_phase_matrices_are_left_alone():
+    library = sheet("conductor, r_aa_ohm_per_km, x_aa_ohm_per_km, rating_a", ["W", 9, 9, 300])
+    table = sheet("line, from_node, to_node, length_km, conductor", ["L1", "S", "B", 1, "W"])
+    assert audited(lines=table, conductors=library) == ()
+
+
 LOW = sheet("node, kv", ["S", 0.48])
+TRANSFORMER = "transformer, from_node, to_node, kva, kv_primary, kv_secondary, z_pct, x_over_r"
 
 
 def test_low_voltage_lines_may_have_any_reactance_and_no_odd_resistance():
@@ -97,6 +127,9 @@ def test_low_voltage_lines_may_have_any_reactance_and_no_odd_resistance():
         return audited(source=LOW, lines=sheet(KM, ["L1", "S", "B", 0.1, r, x, 300]))
 
     assert found(0.3, 0.01) == ()
+    assert found(0.3, 0) == ()
+    assert found(5, 0.05) == ()
+    assert [f.suggestion for f in found(5, 0.049)] == ["check that r and x are not swapped"]
     assert [f.suggestion for f in found(6.2, 0.08)] == ["ohm per mile entered as per km?"]
 
 
@@ -117,11 +150,14 @@ def test_lengths(length, hint):
     found = audited(lines=sheet(KM, ["L1", "S", "B", length, 0.3, 0.4, 300]))
     assert [f.suggestion for f in found] == ([hint] if hint else [])
     assert places(found) == [("warning", "lines", 2, "length_km", str(length))] * bool(hint)
+    assert all(f.finding == f"a line of {length} km" for f in found)
 
 
 @pytest.mark.parametrize(("length", "alarm"), [(2.0, False), (2.1, True)])
-def test_low_voltage_lines_of_many_km(length, alarm):
-    found = audited(source=LOW, lines=sheet(KM, ["L1", "S", "B", length, 0.3, 0.1, 300]))
+@pytest.mark.parametrize("kv", [0.48, 1.0])
+def test_low_voltage_lines_of_many_km(kv, length, alarm):
+    source = sheet("node, kv", ["S", kv])
+    found = audited(source=source, lines=sheet(KM, ["L1", "S", "B", length, 0.3, 0.1, 300]))
     assert [f.finding for f in found] == ["a low-voltage line of 2.1 km"] * alarm
 
 
@@ -148,6 +184,12 @@ def test_feeder_that_is_too_short(count, each, alarm):
     found = audited(lines=table)
     assert [f.suggestion for f in found] == ["km entered as metres or feet?"] * alarm
     assert all("90 m in all" in f.finding for f in found)
+
+
+def test_short_feeders_of_low_voltage_are_common():
+    nodes = ["S", "N1", "N2", "B"]
+    rows = ([f"L{k}", nodes[k], nodes[k + 1], 0.02, 0.3, 0.1, 300] for k in range(3))
+    assert audited(source=sheet("node, kv", ["S", 1.0]), lines=sheet(KM, *rows)) == ()
 
 
 TAPPED = "regulator, from_node, to_node, tap, rating_a"
@@ -212,6 +254,28 @@ def test_low_voltage_line_to_neutral(kv, meant):
     assert [f.suggestion for f in found] == hint
 
 
+@pytest.mark.parametrize(
+    ("kv", "problem"),
+    [(100, None), (101, "101 kV on a feeder"), (7.243, None)],
+)
+def test_edges_of_what_a_source_kv_may_be(kv, problem):
+    assert [f.finding for f in audited(source=sheet("node, kv", ["S", kv]))] == [problem] * bool(
+        problem
+    )
+
+
+# The same list as standard nominal voltages (ANSI C84.1, IEC 60038; from memory), divided by
+# 1.732 and rounded as on nameplates.
+@pytest.mark.parametrize(
+    ("kv", "meant"),
+    [(0.12, 0.208), (0.231, 0.4), (0.277, 0.48), (0.347, 0.6), (6.35, 11), (7.2, 12.47),
+     (7.62, 13.2), (7.97, 13.8), (11.55, 20), (14.4, 24.94), (19.05, 33), (19.92, 34.5)],
+)  # fmt: skip
+def test_line_to_neutral_values_of_the_standard_voltages(kv, meant):
+    found = audited(transformers=transformers(12.47, kv))
+    assert [f.suggestion for f in found] == [f"voltages are line to line: {meant:g}?"]
+
+
 VOLTS = {
     ("source", "voltage_kv"): sheet("node, kv, voltage_kv", ["S", 12.47, 12470]),
     ("nodes", "kv"): sheet("node, kv", ["A", 12470]),
@@ -230,9 +294,6 @@ def test_volts_entered_as_kv(name, column):
     hints = ["check against the transformers", "volts entered as kV?"]
     assert sorted(f.suggestion for f in found) == hints
     assert {p[:4] for p in places(found)} == {("warning", name, 2, column)}
-
-
-TRANSFORMER = "transformer, from_node, to_node, kva, kv_primary, kv_secondary, z_pct, x_over_r"
 
 
 def transformers(*kv, kva=500, phases=None, turned=False, z=2):
@@ -254,6 +315,7 @@ def transformers(*kv, kva=500, phases=None, turned=False, z=2):
         ((7.62, 0.48), "warning", "line to neutral given? rated voltages are line to line"),
         ((21.6, 0.48), "warning", "line to neutral given? rated voltages are line to line"),
         ((16.3, 0.48), "fatal", "check the rated voltages"),
+        ((8.07, 0.48), "fatal", "check the rated voltages"),
         ((4.16, 0.48), "fatal", "check the rated voltages"),
         ((34.5, 0.48), "fatal", "check the rated voltages"),
     ],
@@ -346,6 +408,12 @@ PER_UNIT = {
         (12.47, "voltages stay between 0.8 and 1.2 pu"),
         (102, "percent? 102 % is 1.02 pu"),
         (95, "percent? 95 % is 0.95 pu"),
+        (79, "voltages stay between 0.8 and 1.2 pu"),
+        (80, "percent? 80 % is 0.8 pu"),
+        (107, "percent? 107 % is 1.07 pu"),
+        (108, "volts on a 120 V base? 108 V is 0.9 pu"),
+        (144, "volts on a 120 V base? 144 V is 1.2 pu"),
+        (145, "voltages stay between 0.8 and 1.2 pu"),
         (122, "volts on a 120 V base? 122 V is 1.017 pu"),
         (114, "volts on a 120 V base? 114 V is 0.95 pu"),
     ],
@@ -369,10 +437,16 @@ def test_setpoint_in_volts():
     [
         ("voltage_change_mv_pct", 0.03, True),
         ("voltage_change_mv_pct", 0, False),
+        ("voltage_change_mv_pct", 0.1, True),
+        ("voltage_change_mv_pct", 0.11, False),
         ("voltage_change_lv_pct", 0.05, True),
+        ("voltage_change_lv_pct", 0.11, False),
         ("unbalance_pct", 0.02, True),
+        ("unbalance_pct", 0.11, False),
         ("line_loading_pct", 1, True),
+        ("line_loading_pct", 2.1, False),
         ("transformer_loading_pct", 1.2, True),
+        ("transformer_loading_pct", 2.1, False),
         ("line_loading_pct", 80, False),
         ("worsen_loading_pct", 0.05, False),
         ("V min primary pu", 95, True),
@@ -464,6 +538,13 @@ def test_head_without_limit_carries_everything():
     assert audited(lines=table, loads=sheet("node, kw", ["B", 9000])) == ()
 
 
+def test_head_regulator_without_rating_is_taken_as_able():
+    table = lines().loc[3:]
+    regulators = sheet(TAPPED, ["R", "S", "A", 1, None])
+    loads = sheet("node, kw", ["B", 9000])
+    assert audited(lines=table, regulators=regulators, loads=loads) == ()
+
+
 @pytest.mark.parametrize(("kw", "alarm"), [(500, False), (501, True)])
 def test_head_transformer_carries_its_rating(kw, alarm):
     found = audited(
@@ -476,7 +557,7 @@ def test_head_transformer_carries_its_rating(kw, alarm):
 
 @pytest.mark.parametrize(
     ("kv", "kw", "alarm"),
-    [(12.47, 0.9, True), (12.47, 1, False), (0.48, 0.9, False), (12.47, 0, False)],
+    [(12.47, 0.9, True), (12.47, 1, False), (1, 0.9, False), (12.47, 0, False)],
 )
 def test_feeder_that_serves_next_to_nothing(kv, kw, alarm):
     found = audited(source=sheet("node, kv", ["S", kv]), loads=sheet("node, kw", ["B", kw]))
@@ -506,7 +587,9 @@ def test_more_vars_than_watts(row, alarm):
         ([0], None),
         ([1], None),
         ([0.6], (2, "0.6")),
+        ([500], None),
         ([50, 501], (3, "501")),
+        ([200, 300], None),
         ([300, 300], (0, "")),
     ],
 )
@@ -521,8 +604,9 @@ def test_capacitors(banks, place):
 
 
 def test_small_capacitors_belong_on_low_voltage():
-    found = audited(source=LOW, capacitors=sheet("node, kvar", ["B", 0.6]))
-    assert found == ()
+    bank = sheet("node, kvar", ["B", 0.6])
+    table = sheet(KM, ["L1", "S", "B", 0.1, 0.3, 0.1, 300])
+    assert audited(source=sheet("node, kv", ["S", 1]), lines=table, capacitors=bank) == ()
 
 
 def test_capacitors_on_a_feeder_without_load_are_left_alone():
@@ -538,6 +622,9 @@ def test_capacitors_on_a_feeder_without_load_are_left_alone():
         ([["E", 200, 0, None, None], ["D", 101, 0, None, None]], True),
         ([["E", 200, 250, None, None]], True),
         ([["E", 280, None, 0.9, None]], True),  # 280/0.9 = 311 kVA
+        ([["E", 269, None, 0.9, None]], False),  # 269/0.9 = 299 kVA
+        ([["E", 269, None, 0.9, "inject"]], False),
+        ([["E", 250, None, 0.9, None], ["D", 0, 130, None, None]], True),
         ([["E", 280, None, 0.9, "inject"], ["D", 0, 130, None, None]], False),
         ([["E", 280, None, None, None], ["B", 900, 0, None, None]], False),
     ],
@@ -561,6 +648,7 @@ CASES = "case, hours, load_scale, pv_scale, hp_scale, load_scale.homes"
     ("column", "value", "alarm"),
     [
         ("load_scale", 2, False),
+        ("load_scale", 2.1, True),
         ("load_scale", 85, True),
         ("pv_scale", 100, True),
         ("hp_scale", 30, True),
@@ -579,6 +667,33 @@ def test_scales_in_percent(column, value, alarm):
 def test_hours_beyond_a_year(hours, alarm):
     found = audited(cases=sheet(CASES, ["a", 784], ["b", hours], ["c", None]))
     assert places(found) == [("warning", "cases", 0, "hours", "")] * alarm
+
+
+def test_figures_that_cannot_be_read_are_passed_over():
+    """The audit runs on feeders with fatal findings too, so that all comes in one go."""
+    raw = feeder(
+        loads=sheet("node, kw, kvar", ["X", 5, 0], ["B", "?", 9], ["B", 500, 0]),
+        capacitors=sheet("node, kvar", ["B", "?"], ["B", 300], ["B", 300]),
+        lines=lines(["L3", "B", "C", "?", 0.3, 0.4, 300], ["L4", "C", "D", 99, 0.3, 0.4, 300]),
+    )
+    tables = check_tables(raw)
+    topology, _ = root_feeder(tables)
+    found = audit(tables, topology)
+    assert places(found) == [
+        ("warning", "lines", 5, "length_km", "99"),
+        ("warning", "capacitors", 0, "kvar", ""),
+    ]
+    assert found[1].finding == "600 kvar in all on a feeder with 500 kVA of load"
+
+
+def test_lengths_that_are_not_given_do_not_hide_the_others():
+    table = sheet(
+        "line, from_node, to_node, length_km, r1_ohm, x1_ohm, rating_a",
+        *([f"L{k}", f"N{k}" if k else "S", f"N{k + 1}", 70, 20, 25, 300] for k in range(3)),
+        ["L9", "N3", "B", None, 1, 1, 300],
+    )
+    found = audited(lines=table)
+    assert [f.finding for f in found] == ["210 km of line in all: long for one feeder"]
 
 
 def test_findings_come_in_sheet_and_row_order():

@@ -45,6 +45,8 @@ def line(**cells):
         {"state": "open", "length_km": 1},
         {"state": "open", "r1_ohm": 0, "x1_ohm": 0},
         {"length_km": 1, "conductor": "rated", "b1_us_per_km": 3},
+        {"length_km": 0},
+        {"length_km": 0, "r1_ohm": 1, "x1_ohm": 1, "b1_us_per_km": 3},
     ],
 )
 def test_lines_that_say_enough(cells):
@@ -74,6 +76,7 @@ def test_lines_that_say_enough(cells):
          "r1_ohm_per_km is given without x1_ohm_per_km", "same form"),
         ({"length_km": 1, "x1_ohm_per_km": 1}, "fatal", "r1_ohm_per_km", "", "without", ""),
         ({"r1_ohm": 1}, "fatal", "x1_ohm", "", "r1_ohm is given without x1_ohm", ""),
+        ({"r1_ohm": 0}, "fatal", "x1_ohm", "", "r1_ohm is given without x1_ohm", ""),
         ({"x1_ohm": 1}, "fatal", "r1_ohm", "", "x1_ohm is given without r1_ohm", ""),
         ({"r1_ohm": 1, "x1_ohm": 1, "r0_ohm": 1}, "warning", "x0_ohm", "", "without",
          "else 3 x1 is taken"),
@@ -135,6 +138,11 @@ def test_impedance_wins_over_the_conductor_and_that_is_noted_once():
     ) in notes(found, "lines")
 
 
+def test_conductor_beside_a_total_impedance_needs_no_length():
+    found = line(conductor="rated", r1_ohm=1, x1_ohm=1)
+    assert [(f.severity.value, f.row, f.column) for f in found] == [("note", 0, "conductor")]
+
+
 MATRIX = (
     "conductor, r1_ohm_per_km, x1_ohm_per_km, r0_ohm_per_km, x0_ohm_per_km, b1_us_per_km, "
     "charging_uf_per_km, r_aa_ohm_per_km, x_aa_ohm_per_km, r_ab_ohm_per_km, x_ab_ohm_per_km, "
@@ -153,6 +161,7 @@ def conductor(**cells):
     [
         {"r1": 1, "x1": 1},
         {"r_aa": 1, "x_aa": 1},
+        {"r_aa": 0, "x_aa": 1, "b_aa_us_per_km": 0},
         {"r_aa": 1, "x_aa": 1, "r_bb": 1, "x_bb": 1, "r_ab": 0.1, "x_ab": -0.1},
         {"r1": 1, "x1": 1, "r0": 1, "x0": 1},
     ],
@@ -283,6 +292,7 @@ def test_phases_on_no_line_are_of_no_use():
 def test_blank_phases_on_a_line_are_fatal_where_others_give_them():
     found = phased("ABC", None, loads=["A"])
     assert alarms(found) == [("fatal", "lines", 3, "phases", "")]
+    assert not any("phases" in note for note in notes(found, "lines"))
     assert alarms(phased("ABC", "AX", loads=["A"])) == [("fatal", "lines", 3, "phases", "AX")]
 
 
@@ -291,6 +301,7 @@ def test_blank_phases_elsewhere_are_those_of_the_node_and_noted_once():
     assert alarms(found) == []
     assert "loads phases: blank in 2 of 3 rows: the phases of the node" in notes(found, "loads")
     assert not any("phases" in n for n in notes(phased("A", "A", loads=["A"]), "loads"))
+    assert not any("phases" in n for n in notes(phased("A", "A", loads=["X"]), "loads"))
 
 
 @pytest.mark.parametrize(

@@ -216,13 +216,14 @@ def test_date_where_a_name_belongs_is_doubted():
                 ["L3", "A", "C", 1, None, None, None, dt.date(2026, 2, 2)], header=", conductor"
             ),
             conductors=sheet(
-                "conductor, r1_ohm_per_km, x1_ohm_per_km, rating_a", ["2026-02-02", 1, 1, 200]
+                "conductor, r1_ohm_per_km, x1_ohm_per_km, rating_a", ["2026-02-02", 1, 1, None]
             ),
         )
     )
     assert alarms(tables.findings) == [
         ("warning", "nodes", 2, "node", "2026-04-03"),
         ("warning", "lines", 4, "conductor", "2026-02-02"),
+        ("fatal", "lines", 4, "rating_a", ""),
     ]
     assert tables.sheets["nodes"]["node"].tolist() == ["2026-04-03"]
 

@@ -287,6 +287,8 @@ def test_limits_out_of_range(name, value):
     wanted = [] if legal else [("fatal", "limits", 2, "value", str(value))]
     assert alarms(tables.findings) == wanted
     if not legal:
+        about = next(f for f in tables.findings if f.column == "value")
+        assert about.finding == f"{'negative' if value else 'zero'}, where that cannot be"
         assert tables.settings == Settings()
 
 
@@ -307,8 +309,13 @@ def test_limits_out_of_range(name, value):
     ],
 )
 def test_limits_that_do_not_fit(rows, wanted):
-    found = check_tables(feeder(limits=sheet("limit, value", *rows))).findings
-    assert alarms(found) == wanted
+    tables = check_tables(feeder(limits=sheet("limit, value", *rows)))
+    assert alarms(tables.findings) == wanted
+
+
+def test_limit_that_cannot_be_read_leaves_the_default():
+    table = sheet("limit, value", ["v_max_pu", "?"], ["v_min_pu", None])
+    assert check_tables(feeder(limits=table)).settings == Settings()
 
 
 @pytest.mark.parametrize(

@@ -204,3 +204,39 @@ def test_a_solver_that_answers_the_plain_programme_proves_nothing(
     assert row.state is State.HOSTED
     assert row.rating == pytest.approx(ac_value, abs=1e-7)
     assert row.upper > row.rating
+
+
+# --- rows that host nothing, or nothing but what flows there already ---------------------------
+
+NO_EXPORT = workbook([("S", "B", 0.05, 0.05, 300), ("B", "A", 0.05, 0.05, 300)], 1.05, 0.9)
+NO_EXPORT["source"][0]["export_limit_kw"] = 0
+PV_AT_A = [{"node": "A", "technology": "pv"}]
+
+
+def test_a_feeder_without_load_that_may_not_export_hosts_nothing():
+    (row,) = host(build({**NO_EXPORT, "candidates": PV_AT_A}), Options()).rows
+    assert row.criterion == "head_export"
+    assert row.hosting == 0.0
+    assert row.proof is not Proof.FAILED
+
+
+def test_a_plant_that_just_meets_the_only_load_is_proven():
+    # 100 kW at the node itself, no export allowed: 100 kW of PV, and no current anywhere.
+    tables = {**NO_EXPORT, "loads": [{"node": "A", "kw": 100}], "candidates": PV_AT_A}
+    (row,) = host(build(tables), Options()).rows
+    assert row.criterion == "head_export"
+    assert row.rating == pytest.approx(0.1, rel=1e-6)
+    assert row.proof is Proof.PROVEN
+
+
+def test_a_limit_that_may_not_get_worse_at_all_hosts_nothing():
+    # 600 kW at the end hold A below 0.95; with no worsening allowed nothing more fits.
+    tables = workbook([("S", "B", 0.05, 0.05, 300), ("B", "A", 0.05, 0.05, 300)], 1.05, 0.95)
+    tables["loads"] = [{"node": "A", "kw": 600}]
+    tables["limits"].append({"limit": "worsen_voltage_pu", "value": 0})
+    tables["cases"][0]["ev_scale"] = 1
+    tables["candidates"] = [{"node": "A", "technology": "ev"}]
+    (row,) = host(build(tables), Options()).rows
+    assert row.state is State.HOSTED_BASE_VIOLATION
+    assert row.hosting == 0.0
+    assert row.proof is not Proof.FAILED

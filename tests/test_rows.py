@@ -425,6 +425,25 @@ def test_storage_is_the_smaller_of_its_directions(
     assert alone["voltage_low_kw"] == pytest.approx(other, rel=1e-9)
 
 
+def test_storage_may_bind_in_either_direction_on_one_feeder() -> None:
+    # Two such lines side by side: at A no lower limit matters, at B no upper one.
+    tables = two_bus(
+        nodes=[{"node": "A", "v_min_pu": 0.5}, {"node": "B", "v_max_pu": 1.5}],
+        candidates=[{"node": n, "technology": "storage"} for n in "AB"],
+    )
+    tables["lines"] = [
+        {"line": f"L{n}", "from_node": "S", "to_node": n, "r1_ohm": 5, "x1_ohm": 5,
+         "rating_a": "unlimited"}
+        for n in "AB"
+    ]  # fmt: skip
+    hosting = report(tables).tables["hosting"]
+    a, b = (line_of(hosting, n, "storage") for n in "AB")
+    assert (a["criterion"], b["criterion"]) == ("voltage_high", "voltage_low")
+    assert (a["proof"], b["proof"]) == ("proven", "proven")
+    assert a["hosting_unrounded_kw"] == pytest.approx(EXPORT_KW, rel=1e-9)
+    assert b["hosting_unrounded_kw"] == pytest.approx(IMPORT_KW, rel=1e-9)
+
+
 def test_storage_that_is_there_runs_in_the_direction_under_test() -> None:
     # 200 kW of it: 200 kW less of pv and of ev; nothing in the base case.
     tables = two_bus(generators=[{"node": "N", "kw": 200, "technology": "storage"}])

@@ -236,10 +236,13 @@ def test_nothing_is_found_beyond_the_cap(cap: float, met: bool):
 
 
 def test_a_limit_broken_at_zero_hosts_nothing():
-    found = first(two_bus(0.05, 0.05, [high(1, 1.05), low(1, 0.95)], power=1.0), plant(1))
+    # Of two nodes only the far one is below its limit: that one is named.
+    net = network([-1, 0, 1], [0.05 + 0.05j] * 2)
+    sys = system(net, loading(3, {2: 0.6}), [high(1, 1.05), low(1, 0.95), low(2, 0.95)])
+    found = first(sys, plant(2, sigma=-1))
     assert found.criterion == "voltage_low"
     assert found.rating == 0.0
-    assert found.row == 1
+    assert found.row == 2
 
 
 def test_watched_rows_are_found_but_limit_nothing():
@@ -284,6 +287,20 @@ def test_cutting_into_blocks_changes_no_number():
     for i in range(5):
         alone = first_violations(FORK_SYSTEM, many.pick(np.array([i])), SETTINGS)
         assert np.array_equal(whole.rating[:, i], alone.rating[:, 0])
+
+
+def test_looking_for_the_first_violation_only_finds_the_same_one():
+    many = plants([1, 2, 3, 4, 5], cap=20.0)
+    whole = first_violations(FORK_SYSTEM, many, SETTINGS)
+    short = first_violations(FORK_SYSTEM, many, SETTINGS, first_only=True)
+    real = [g for g in range(len(whole.rating)) if g != WATCHED]
+    at = whole.rating[real].argmin(axis=0)
+    assert np.array_equal(short.rating[real].argmin(axis=0), at)
+    assert short.rating[real].min(axis=0) == pytest.approx(whole.rating[real].min(axis=0), rel=1e-9)
+    # What is met later is left open, or is what the whole search finds.
+    met = np.isfinite(short.rating)
+    assert np.allclose(short.rating[met], whole.rating[met], rtol=1e-9, atol=0)
+    assert met.sum() < np.isfinite(whole.rating).sum()
 
 
 def test_the_order_of_plants_permutes_the_answers():

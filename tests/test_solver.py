@@ -36,7 +36,8 @@ def test_clean_answer_at_a_known_optimum(solver: str):
 def test_infeasible(solver: str):
     _, problems = cone(-1.0)
     answer = solve(problems, solver, SETTINGS)
-    assert (answer.solver, answer.status) == (solver, Status.INFEASIBLE)
+    # A bound may rest on it, so ECOS's word for it is asked of Clarabel too.
+    assert (answer.solver, answer.status) == ("clarabel", Status.INFEASIBLE)
 
 
 @pytest.mark.parametrize("solver", SOLVERS)

@@ -163,6 +163,8 @@ def test_default_does_not_cover_an_unusable_cell():
     ("name", "header", "severity", "problem", "suggestion"),
     [
         ("loads", "colour", "note", "not known", ""),
+        ("lines", "colour", "note", "not known", ""),
+        ("nodes", "xtra", "note", "not known", ""),
         ("loads", "kvarr", "note", "not known", "did you mean kvar?"),
         ("loads", "calss", "note", "not known", "did you mean class?"),
         ("loads", "Power facto", "note", "not known", "did you mean power_factor?"),
@@ -174,7 +176,7 @@ def test_default_does_not_cover_an_unusable_cell():
 )  # fmt: skip
 def test_unknown_headers(name, header, severity, problem, suggestion):
     raw = feeder()
-    raw.setdefault(name, sheet("regulator, from_node, to_node", ["R", "A", "B"]))
+    raw.setdefault(name, sheet("regulator, from_node, to_node, node", ["R", "A", "B", "A"]))
     raw[name][header] = None
     found = [f for f in check_tables(raw).findings if f.column == header]
     assert [(f.severity.value, f.row, f.value) for f in found] == [(severity, 1, header)]
@@ -220,6 +222,7 @@ def test_lines_without_rows_still_need_their_columns():
 
 def test_optional_sheets_are_noted_once_with_what_is_assumed():
     found = check_tables(feeder(capacitors=sheet("node"), limits=pd.DataFrame())).findings
+    assert alarms(found) == []
     absent = [f for f in found if f.row == 0 and not f.column]
     assert [f.sheet for f in absent] == [
         name for name in INPUT if name not in ("source", "lines", "loads")
@@ -310,6 +313,12 @@ def test_faulty_header_of_requests_spoils_every_request():
     tables = check_tables(raw)
     assert alarms(tables.findings) == [("warning", "requests", 1, "kw", "")]
     assert tables.faulty_requests == {2, 3}
+
+
+def test_what_a_missing_column_would_have_said_is_not_guessed():
+    table = sheet("request, node, kw, power_factor", ["Q1", "B", 5, 0.9])
+    tables = check_tables(feeder(requests=table))
+    assert alarms(tables.findings) == [("warning", "requests", 1, "technology", "")]
 
 
 def test_several_rows_with_one_request_id_are_one_site():

@@ -42,6 +42,33 @@ def test_sums_leave_their_argument_alone_and_keep_trailing_axes():
     assert np.array_equal(values, before)
 
 
+@pytest.mark.parametrize("kind", [float, complex])
+def test_many_columns_at_once_sum_as_each_alone(kind: type):
+    # Few columns and many take different roads; both must give the same sums.
+    rng = np.random.default_rng(1)
+    values = rng.normal(size=(7, 3, 40)).astype(kind)
+    if kind is complex:
+        values += 1j * rng.normal(size=values.shape)
+    for total in (subtree_sum, path_sum):
+        many = total(FORK, values)
+        assert many.shape == values.shape
+        for i in range(3):
+            for c in (0, 17, 39):
+                alone = total(FORK, values[:, i, c])
+                assert np.allclose(many[:, i, c], alone, rtol=0, atol=1e-12)
+
+
+def test_whole_numbers_stay_whole():
+    assert subtree_sum(FORK, np.ones(7, int)).tolist() == [7, 3, 1, 1, 3, 2, 1]
+    assert path_sum(FORK, np.ones(7, int)).dtype == int
+
+
+def test_a_lost_column_does_not_spoil_its_neighbours():
+    values = np.stack([VALUES, np.full(7, np.nan)], axis=-1)
+    assert subtree_sum(FORK, values)[:, 0].tolist() == [127, 14, 4, 8, 112, 96, 64]
+    assert path_sum(FORK, values)[:, 0].tolist() == [1, 3, 7, 11, 17, 49, 113]
+
+
 def test_a_single_node_is_a_tree():
     alone = Tree(np.array([-1]))
     assert alone.size == 1

@@ -121,7 +121,7 @@ def _total_load(
 
 
 def _head_kva(tables: Tables, topology: Topology, kv: Sequence[float]) -> float:
-    """Return what the branches that leave the source can carry, kVA; inf where not known."""
+    """Return what the branches that leave the source can carry, kVA; NaN where not known."""
     ratings = {cells["conductor"]: cells["rating_a"] for _, cells in tables.rows("conductors")}
     rows = {
         (sheet, row): cells
@@ -140,7 +140,7 @@ def _head_kva(tables: Tables, topology: Topology, kv: Sequence[float]) -> float:
             if amperes != amperes and edge.sheet == "lines":
                 amperes = ratings.get(cells["conductor"], math.nan)
             kva = ROOT_3 * kv[0] * amperes
-        able += kva if kva == kva else math.inf
+        able += kva
     return able
 
 

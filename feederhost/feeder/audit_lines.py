@@ -57,7 +57,7 @@ def audit_lines(
         impedance = _per_km(cells)
         if impedance is not None:
             findings += _impedance(tables, "lines", edge.row, impedance, above)
-        elif cells["conductor"]:
+        else:
             high[cells["conductor"]] = high.get(cells["conductor"], False) or above
     for row, cells in tables.rows("conductors"):
         impedance = _per_km({**cells, "r1_ohm": math.nan, "x1_ohm": math.nan})

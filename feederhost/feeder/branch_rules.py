@@ -101,11 +101,11 @@ def _length_rules(
     unread = any((row, key) in lines.faulty for key in (*_PER_KM, *_TOTAL, "conductor"))
     if unread or cells["state"] == "open":
         return []
-    if length and cells["length_km"] > 0 and not explicit and not cells["conductor"]:
+    if cells["length_km"] > 0 and not explicit and not cells["conductor"]:
         problem = "a length and no impedance: taken as a switch, without voltage drop"
         hint = "give conductor or impedance, unless it is a switch"
         return [lines.finding(Severity.WARNING, row, "length_km", problem, hint)]
-    if length and cells["length_km"] == 0 and per_length and not given(cells, *_TOTAL):
+    if cells["length_km"] == 0 and per_length and not given(cells, *_TOTAL):
         problem = "a length of zero: taken as a switch"
         return [lines.finding(Severity.NOTE, row, "length_km", problem)]
     if len(explicit) > 1 and not any(cells[key] for key in explicit):
@@ -193,7 +193,7 @@ def regulator_rules(reads: Mapping[str, Checked]) -> list[Finding]:
     for row, cells in checked.rows():
         findings += said_twice(checked, row, cells, *setpoints)
         taps = given(cells, "tap", *phase_taps)
-        for key in phase_taps if "tap" in taps else ():
+        for key in phase_taps:
             findings += said_twice(checked, row, cells, "tap", key)
         if not given(cells, *aims) and not any((row, key) in checked.faulty for key in aims):
             problem = "neither a setpoint nor a tap"

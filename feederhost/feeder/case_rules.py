@@ -10,7 +10,7 @@ from feederhost.errors import Finding, Severity
 from feederhost.feeder.columns import Checked, given, said_twice
 from feederhost.feeder.headers import HEADER_ROW
 from feederhost.feeder.names import did_you_mean, fold, near_index
-from feederhost.schema import BUILT_IN_TECHNOLOGIES, INPUT, MOST_CASES
+from feederhost.schema import INPUT, MOST_CASES
 from feederhost.settings import Settings, sheet_settings
 
 # Limits that may be zero (off, or none at all); all others must be above it.
@@ -63,13 +63,9 @@ def case_rules(reads: Mapping[str, Checked]) -> list[Finding]:
         findings.append(cases.finding(Severity.FATAL, 0, "case", problem, hint))
     for row, cells in cases.rows():
         findings += said_twice(cases, row, cells, "source_voltage_pu", "source_voltage_kv")
-    known = {column.key for column in INPUT["cases"].columns if not column.pattern}
+    known = {column.key for column in INPUT["cases"].columns}
     classes = [cells["class"] for _, cells in reads["loads"].rows()]
     followed = {cells["scale"] for _, cells in reads["technologies"].rows()}
-    replaced = {cells["technology"] for _, cells in reads["technologies"].rows()}
-    followed.update(
-        t.get("scale", "") for t in BUILT_IN_TECHNOLOGIES if t["technology"] not in replaced
-    )
     for key in (k for k in cases.table.columns if k not in known and k not in followed):
         if key.startswith(_CLASS_PREFIX):
             word = key.removeprefix(_CLASS_PREFIX)

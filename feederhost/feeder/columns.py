@@ -67,8 +67,8 @@ def records(table: pd.DataFrame) -> Iterator[tuple[int, dict[str, Any]]]:
 
 
 def given(cells: Mapping[str, Any], *keys: str) -> list[str]:
-    """Return those of the keys whose cell holds a value."""
-    return [key for key in keys if cells[key] == cells[key] and cells[key] != ""]
+    """Return those of the number columns whose cell holds a value."""
+    return [key for key in keys if cells[key] == cells[key]]
 
 
 def said_twice(
@@ -142,7 +142,7 @@ def _read_column(
     harmless = (
         sheet.name in _HARMLESS_SHEETS
         or head.column.name in _HARMLESS_COLUMNS
-        or (head.column.name in FREE_TEXT and not head.column.required)
+        or head.column.name in FREE_TEXT
     )
     for row, cell in zip(rows, cells, strict=True):
         reading = read_cell(cell, head.column, head.factor)

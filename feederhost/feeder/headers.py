@@ -50,7 +50,7 @@ def match_headers(
     """
     heads: dict[str, Head] = {}
     findings: list[Finding] = []
-    index = near_index(h for c in sheet.columns if not c.pattern for h in c.headers)
+    index = near_index(h for c in sheet.columns for h in c.headers)
     for position, written in enumerate(headers):
         head = _match(sheet, position, written)
         if head is None:

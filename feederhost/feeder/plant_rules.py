@@ -25,7 +25,6 @@ def directions(reads: Mapping[str, Checked]) -> dict[str, str]:
     known = {name: str(technology["direction"]) for name, technology in _BUILT_IN.items()}
     rows = (cells for _, cells in reads["technologies"].rows())
     known.update((cells["technology"], cells["direction"]) for cells in rows)
-    known.pop("", None)
     return known
 
 
@@ -120,8 +119,7 @@ def _vars_missing(
     checked: Checked, row: int, cells: Mapping[str, Any], direction: str
 ) -> list[Finding]:
     """Return a fatal finding where an export below unity does not say which way its vars go."""
-    below_unity = given(cells, "power_factor") and cells["power_factor"] < 1
-    if direction not in ("export", "both") or not below_unity:
+    if direction not in ("export", "both") or not cells["power_factor"] < 1:
         return []
     if cells["vars"] or _faulty(checked, row, "vars"):
         return []

@@ -113,7 +113,8 @@ def refer(network: Network, ratio: Floats) -> Network:
     Parameters
     ----------
     network : Network
-        Quantities as they are behind each ratio; its own ``gain`` is ignored.
+        Series impedance and receiving shunt as they are behind each ratio, the sending shunt
+        as it is before it; its own ``gain`` is ignored.
     ratio : (n, phases) float
         Voltage behind the ratio over voltage before it, 1 where there is none.
     """

@@ -163,7 +163,9 @@ def _search_block(
     cap = plants.cap[columns]
     g = np.zeros(columns.size)
     here = try_ratings(system, plants.pick(columns), g, settings)
-    broken = here.slack < 0
+    # Rounding aside; a limit that is just met and recedes is not in the way.
+    broken = here.slack < -settings.rounding_slack
+    broken |= (here.slack < settings.rounding_slack) & (here.slope < 0) & (here.slack <= 0)
     for c in present:
         # A watched quantity may start beyond its bound; a limit may not (its rows are relaxed).
         at_once = broken[group == c].any(axis=0)
@@ -185,7 +187,7 @@ def _search_block(
         there = try_ratings(system, chosen, ahead, settings, here.point.V)
         width = ahead - g[live]
         solved = there.point.solved
-        crossed = (there.slack < 0) & open_rows & solved
+        crossed = (there.slack < -settings.rounding_slack) & open_rows & solved
         dip = open_rows & ~crossed & solved & _may_dip(here, there, width)
         unsure = dip.any(axis=0) & (width > settings.search_tolerance * cap[live])
         step[live] = np.where(unsure, width / 4, width * 2)
@@ -204,7 +206,9 @@ def _search_block(
                 rating[c, pick[at]] = g[live[at]]
         g[live[sure]] = ahead[sure]
         here = _merge(here, there, sure)
-        done = (g[live] >= cap[live]) | np.isfinite(rating[:, pick])[present].all(axis=0)
+        done = g[live] >= cap[live]
+        if present.size:
+            done |= np.isfinite(rating[:, pick])[present].all(axis=0)
         done |= np.isfinite(rating[NO_SOLUTION, pick])
         if first_only:
             done |= np.isfinite(rating[:WATCHED, pick]).any(axis=0)
@@ -218,7 +222,7 @@ def _step(
 ) -> Floats:
     """Next step: a little past the nearest tangent zero, within the bounds of Settings."""
     falling = open_rows & (here.slope < 0)
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         reach = np.where(falling, -here.slack / here.slope, np.inf).min(axis=0, initial=np.inf)
     reach = np.maximum(settings.search_overshoot * reach, settings.search_first_share * cap)
     return np.minimum(np.minimum(reach, step), settings.search_step_share * cap)

@@ -88,7 +88,7 @@ def find_taps(
     """Find the taps of a base case.
 
     From neutral, source outwards, one step at a time until the voltage is within half the
-    bandwidth of the setpoint; a regulator that would hunt (a step wider than the band) stops.
+    bandwidth of the setpoint; a step that brings the voltage no closer is not taken.
     Passes repeat until no regulator moves, because a downstream tap shifts the flow upstream.
     """
     ratio = np.array(ratio, dtype=float)
@@ -102,18 +102,18 @@ def find_taps(
             break
         moved = False
         for i, regulator in enumerate(regulators):
-            last = 0
             while regulator.moves:
                 off = _voltage_at(solved, regulator) - regulator.setpoint
-                step = -int(np.sign(off))
-                within = abs(off) <= regulator.bandwidth / 2
-                end = abs(taps[i] + step) > regulator.steps / 2
-                if within or end or step == -last:
+                tap = taps[i] - float(np.sign(off))
+                if abs(off) <= regulator.bandwidth / 2 or abs(tap) > regulator.steps / 2:
                     break
-                taps[i] += step
-                last, moved = step, True
-                ratio[regulator.node] = regulator.ratio(taps[i])
-                solved = solve_at(network, loading, ratio, settings)
+                ratio[regulator.node] = regulator.ratio(tap)
+                tried = solve_at(network, loading, ratio, settings)
+                if abs(_voltage_at(tried, regulator) - regulator.setpoint) >= abs(off):
+                    # A step wider than the band: it would hunt.
+                    ratio[regulator.node] = regulator.ratio(taps[i])
+                    break
+                taps[i], solved, moved = tap, tried, True
     return Solved(ratio.copy(), tuple(taps), solved.network, solved.loading, solved.point)
 
 

@@ -31,40 +31,60 @@ def upper_bound(
 ) -> float:
     """Return a rating that no operating point within the limits exceeds.
 
-    Halves the interval from the rating to the cap: an upper half that is infeasible is cut off,
-    otherwise the relaxation's own optimum there is the bound.
+    Works down from the cap: an upper slice that is infeasible is cut off; where it is not, the
+    relaxation's own optimum there is the bound, or a narrower slice is tried.
     """
     zero = np.zeros(flow.tree.size)
-    low, high = rating, cap
+    low, high = (rating + cap) / 2, cap
     for _ in range(settings.bound_rounds):
-        if high - rating <= settings.solver_agreement * high:
+        if high - low <= settings.solver_agreement * high:
             break
-        low = (rating + high) / 2
-        cuts = flow_ranges(system, flow, seek, column, low, high)
+        cuts = flow_ranges(system, flow, seek, column, low, high, settings)
+        if cuts is None:
+            break
         found = solve_row(
             programme, system, flow, seek, column, zero, rating, high, solver, settings, cuts
         )
-        if found.answer.status is Status.INFEASIBLE:
+        status = found.answer.status
+        if status is Status.INFEASIBLE:
             high = low
-        elif np.isfinite(found.g) and found.g < high * (1 - settings.solver_agreement):
+            low = (rating + high) / 2
+        elif status is not Status.CLEAN:
+            break  # an inexact answer bounds nothing
+        elif found.g < high * (1 - settings.solver_agreement):
             high = max(found.g * (1 + settings.solver_agreement), low)
         else:
-            break
+            low = (low + high) / 2  # a narrower slice has tighter ranges
     return high
 
 
 def flow_ranges(
-    system: System, flow: BranchFlow, seek: Seek, column: int, low: float, high: float
-) -> Cuts:
-    """Return ranges of P, Q, v_pi and ell that hold at every AC point with g in [low, high]."""
+    system: System,
+    flow: BranchFlow,
+    seek: Seek,
+    column: int,
+    low: float,
+    high: float,
+    settings: Settings,
+) -> Cuts | None:
+    """Return ranges of P, Q, v_pi and ell that hold at every AC point with g in [low, high].
+
+    None where they grow beyond use: on a long feeder without ratings the losses that cannot be
+    ruled out add up from leaf to source.
+    """
+    useless = settings.range_limit * max(high, float(np.abs(flow.P[:, column]).max()))
     tree, limits = flow.tree, system.limits
     n, j, draw = tree.size, int(seek.node[column]), seek.draw[column]
     v = _voltage_range(system, flow, column)
-    ell_max = np.full(n, np.inf)
-    for i in np.flatnonzero(limits.quantity == Quantity.CURRENT_FROM):
-        k = limits.element[i]
-        if not np.any(flow.y_from[k]) and limits.criterion[i] >= 0:
-            ell_max[k] = min(ell_max[k], limits.bound[i])
+    # No current is larger than what the voltages at both ends can drive through the branch.
+    sending = v[np.maximum(tree.parent, 0), 1]
+    with np.errstate(divide="ignore"):
+        ell_max = (np.sqrt(sending) + np.sqrt(v[:, 1])) ** 2 / (flow.r**2 + flow.x**2)[:, 0]
+    for end, shunt in ((Quantity.CURRENT_FROM, flow.y_from), (Quantity.CURRENT_TO, flow.y_to)):
+        for i in np.flatnonzero((limits.quantity == end) & (limits.criterion >= 0)):
+            k = limits.element[i]
+            if not np.any(shunt[k]):
+                ell_max[k] = min(ell_max[k], limits.bound[i])
     G, B = flow.G[:, column, None], flow.B[:, column, None]
     P = flow.p[:, column, None] + np.sort(G * v, axis=1)
     Q = flow.q[:, column, None] + np.sort(-B * v, axis=1)
@@ -78,6 +98,8 @@ def flow_ranges(
         ell[k, 0] = (square_p[0] + square_q[0]) / v[k, 1]
         ell[k, 1] = min((square_p[1] + square_q[1]) / v[k, 0], ell_max[k])
         ell[k, 0] = min(ell[k, 0], ell[k, 1])
+        if not ell[k, 1] < useless**2:
+            return None
         P[k] += flow.r[k] * ell[k]
         Q[k] += flow.x[k] * ell[k]
         P[tree.parent[k]] += P[k]

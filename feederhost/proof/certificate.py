@@ -81,11 +81,24 @@ def certify(
     prices, ell_slope : (n, m) float
         Loss prices; derivative of ell with the rating at the AC point.
     """
-    w = prices.copy()
+    with np.errstate(all="ignore"):
+        return _certify(flow, seek, gradient, prices.copy(), ell_slope, settings)
+
+
+def _certify(
+    flow: BranchFlow,
+    seek: Seek,
+    gradient: Gradient,
+    w: Floats,
+    ell_slope: Floats,
+    settings: Settings,
+) -> Certificate:
+    """Certify with prices ``w``, which are raised in place; numbers may run away, and are seen."""
     solved, limit = _scaled(flow, seek, gradient, w, settings)
     for _ in range(settings.price_raises):
-        short = solved.T + settings.multiplier_tolerance * solved.T.max(axis=0) < 0
-        rows = np.flatnonzero(short.any(axis=0) & (limit > 0))
+        short = solved.T < -_allowed(solved, w, settings)
+        rising = (w * ell_slope)[1:].sum(axis=0) < 1
+        rows = np.flatnonzero(short.any(axis=0) & (limit > 0) & rising)
         if rows.size == 0:
             break
         lift = np.where(short, -solved.T * flow.v_pi, 0.0)[:, rows]
@@ -104,10 +117,20 @@ def certify(
     closes = (
         (residual <= settings.recursion_tolerance)
         & (smallest >= -settings.multiplier_tolerance)
+        & ~(solved.T < -_allowed(solved, w, settings)).any(axis=0)
         & (limit > 0)
         & (margin > 0)
     )
     return Certificate(solved, w, limit, smallest, residual, margin, closes)
+
+
+def _allowed(y: Multipliers, w: Floats, settings: Settings) -> Floats:
+    """How far below zero a cone multiplier may be, (m,): rounding of the largest, or of a price.
+
+    The prices count because one huge multiplier would hide a negative one elsewhere.
+    """
+    size = np.minimum(y.T.max(axis=0), w.max(axis=0))
+    return settings.multiplier_tolerance * size
 
 
 def multipliers_at(

@@ -50,8 +50,11 @@ def loss_prices(
         rate = np.where(gained > 0, gained / spent, 0.0)
     rate = np.where(np.isfinite(rate), rate, 0.0)
     power = flow.P**2 + flow.Q**2
-    power = np.maximum(power, settings.idle_share**2 * power.max(axis=0))
+    largest = np.maximum(power.max(axis=0), np.abs(seek.draw * rating) ** 2)
+    power = np.maximum(power, settings.idle_share**2 * largest)
     w = np.maximum((1 + settings.price_margin) * rate, settings.price_floor * flow.r)
-    w = np.maximum(w, settings.price_floor_share * rating / power)
+    # Without any power, at a rating of nothing, there is no current to keep from floating.
+    share = np.divide(settings.price_floor_share * rating, power, where=power > 0, out=0 * power)
+    w = np.maximum(w, share)
     w[0] = 0.0
     return w

@@ -38,9 +38,7 @@ _KNOWN = {
     cp.OPTIMAL: Status.CLEAN,
     cp.OPTIMAL_INACCURATE: Status.INACCURATE,
     cp.INFEASIBLE: Status.INFEASIBLE,
-    cp.INFEASIBLE_INACCURATE: Status.INFEASIBLE,
     cp.UNBOUNDED: Status.UNBOUNDED,
-    cp.UNBOUNDED_INACCURATE: Status.UNBOUNDED,
 }
 
 
@@ -58,7 +56,7 @@ def solve(problems: Mapping[str, cp.Problem], solver: str, settings: Settings) -
         The same programme once per solver: a problem that changes its solver is compiled anew.
     """
     answer = _solve_once(problems[solver], solver, settings)
-    if solver == ECOS and answer.status not in (Status.CLEAN, Status.INFEASIBLE):
+    if solver == ECOS and answer.status is not Status.CLEAN:
         answer = _solve_once(problems[CLARABEL], CLARABEL, settings)
     return answer
 

@@ -108,7 +108,7 @@ def solve_row(
     rating, cap : float
         Rating at the origin, which is also its unit; largest rating allowed.
     """
-    origin = _origin(flow, seek, column, rating, settings)
+    origin = _origin(flow, seek, column, rating, cap, settings)
     values = _network_values(flow, seek, column, origin)
     values |= _limit_values(programme, system, flow, column, origin, cap)
     values["w"] = (w * origin.power**2 / origin.rating)[1:]
@@ -120,10 +120,13 @@ def solve_row(
     return _solution(programme, flow, origin, answer)
 
 
-def _origin(flow: BranchFlow, seek: Seek, column: int, rating: float, settings: Settings) -> Origin:
+def _origin(
+    flow: BranchFlow, seek: Seek, column: int, rating: float, cap: float, settings: Settings
+) -> Origin:
     P, Q, v = flow.P[:, column], flow.Q[:, column], flow.v[:, column]
     draw = seek.draw[column]
-    unit = max(rating, np.finfo(float).tiny)
+    # A rating of nothing still needs a unit: the share that an idle branch has.
+    unit = rating if rating >= settings.tiny_rating else settings.idle_share * cap
     on_path = path(flow.tree, int(seek.node[column]))
     power = np.hypot(P, Q)
     power[on_path] = np.maximum(power[on_path], unit * abs(draw))

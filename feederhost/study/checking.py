@@ -12,6 +12,7 @@ from feederhost.feeder.model import Feeder
 from feederhost.flow.search import GROUPS, blocks, slacks_with
 from feederhost.flow.tree import Floats, Ints
 from feederhost.schema import Criterion, Proof, State
+from feederhost.settings import Settings
 from feederhost.study.cases import BOTH, CaseStudy, case_scale
 from feederhost.study.options import Options
 from feederhost.study.rows import HostingRow, plants_in
@@ -44,10 +45,7 @@ def check_rows(
                     which = np.array(members)[cut]
                     _check_block(feeder, rows, which, way, scale, study, least, above, mismatch)
             options.progress(f"AC check {way}", s + 1, len(cases))
-    return [
-        _judged(row, least[i], above[i], mismatch[i], settings.mismatch_tolerance)
-        for i, row in enumerate(rows)
-    ]
+    return [_judged(row, least[i], above[i], mismatch[i], settings) for i, row in enumerate(rows)]
 
 
 def _both(feeder: Feeder, row: HostingRow) -> bool:
@@ -69,6 +67,7 @@ def _check_block(
     settings = feeder.settings
     value = np.array([rows[i].hosting for i in which])
     over = np.array([rows[i].rating for i in which]) * (1 + settings.above_share)
+    over = np.maximum(over, settings.tiny_rating)
     candidates = [rows[i].candidate for i in which]
     for posed in study.posed:
         plants = plants_in(candidates, way, scale, posed.shift, feeder.network.phases)
@@ -81,11 +80,11 @@ def _check_block(
 
 
 def _judged(
-    row: HostingRow, least: float, above: float, mismatch: float, tolerance: float
+    row: HostingRow, least: float, above: float, mismatch: float, settings: Settings
 ) -> HostingRow:
     if row.state is State.NOT_ANALYSED:
         return row
-    passes = least >= 0 and mismatch <= tolerance
+    passes = least >= -settings.rounding_slack and mismatch <= settings.mismatch_tolerance
     passes = passes and (row.state is State.CAPPED or above < 0)
     if passes:
         return replace(row, mismatch=mismatch, slack=least)

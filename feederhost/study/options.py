@@ -22,4 +22,7 @@ class Options:
     cases: tuple[str, ...] = ()
     solver: str = ""
     plain: bool = False
+    reserve: str = "fitting"
+    remedies: bool = True
+    resume: bool = False
     progress: Progress = silent

@@ -23,6 +23,7 @@ from feederhost.proof.branchflow import (
 from feederhost.proof.certificate import Certificate, certify
 from feederhost.proof.pricing import loss_prices
 from feederhost.proof.program import Programme, compile_programme, structure
+from feederhost.proof.recovery import recover
 from feederhost.proof.solver import CLARABEL, ECOS, default_solver
 from feederhost.proof.valuing import Relaxed, solve_row
 from feederhost.schema import Proof
@@ -45,6 +46,8 @@ class Evidence:
         Of the whole batch; ``column`` picks the row.
     relaxed, plain : Relaxed or None
         Conic solutions of the priced and the plain programme, where solved.
+    plain_outcome : str
+        Why the plain solution is no operating point to publish.
     """
 
     system: System
@@ -59,6 +62,7 @@ class Evidence:
     certificate: Certificate
     relaxed: Relaxed | None = None
     plain: Relaxed | None = None
+    plain_outcome: str = ""
 
     def own(self, values: Floats) -> float:
         """Return this row's entry of a per-row array."""
@@ -142,14 +146,17 @@ class Prover:
         prices = own.certificate.prices[:, own.column]
         # The programme is convex: a cap that does not bind leaves its optimum where it is, and
         # a near one spares the solver numbers of very different size.
-        near = min(cap, settings.solver_room * own.rating) if own.rating > 0 else cap
+        started = own.rating >= settings.tiny_rating
+        near = min(cap, settings.solver_room * own.rating) if started else cap
         relaxed = solve(prices, near) if own.limit >= 0 else None
         if relaxed is not None and not self._agrees(relaxed, own) and self.solver == ECOS:
             # ECOS may call an inexact end clean; the second solver has the last word.
             relaxed = solve(prices, near, CLARABEL)
-        solved = replace(
-            own, relaxed=relaxed, plain=solve(np.zeros_like(prices), cap) if plain else None
-        )
+        solved = replace(own, relaxed=relaxed)
+        if plain:
+            naive = solve(np.zeros_like(prices), cap)
+            judged = recover(own.system, own.plant, naive, own.rating, settings)
+            solved = replace(solved, plain=naive, plain_outcome=str(judged.outcome))
         closes = bool(own.certificate.closes[own.column])
         if relaxed is not None and closes and self._agrees(relaxed, own):
             return Verdict(Proof.PROVEN, own.rating, solved)
@@ -160,5 +167,9 @@ class Prover:
         return Verdict(Proof.BRACKETED, upper, solved)
 
     def _agrees(self, relaxed: Relaxed, own: Evidence) -> bool:
-        gap = abs(relaxed.g - own.rating)
-        return bool(gap <= self.settings.solver_agreement * own.rating)
+        settings = self.settings
+        size = own.rating
+        if size < settings.tiny_rating:
+            # Nothing fits: agreement is counted in the unit the programme was posed in.
+            size = settings.idle_share * float(own.plant.cap[0])
+        return bool(abs(relaxed.g - own.rating) <= settings.solver_agreement * size)

@@ -193,40 +193,66 @@ def _swing(
     return Stop(low, Criterion.VOLTAGE_CHANGE, way, study, swing=True)
 
 
-def swing_room(line: Line, site: Site, study: CaseStudy, drawn: Complexes, sizes: Floats) -> Floats:
-    """Least room of the voltage change when storage goes from charge to discharge, (m,)."""
+def swing_room(
+    line: Line, site: Site, study: CaseStudy, others: Complexes, sizes: Floats
+) -> Floats:
+    """Least room of the voltage change when storage goes from charge to discharge, (m,).
+
+    ``others`` (n, phases, 1 or m) is what the queue draws.
+    """
     feeder, case = line.feeder, study.case
     stored = replace(
         site, parts=tuple(p for p in site.parts if p.technology.direction == BOTH)
     )  # fmt: skip
     share = stored.asked / site.asked
-    network, loading, shift = _change_system(feeder, study, drawn)
-    voltages = []
+    frame = _change_frame(feeder, study, study.held.loading.power + others)
+    ends = []
     for way in (EXPORT, IMPORT):
-        m = sizes.size
-        power = np.repeat(loading.power, m, axis=2).astype(complex)
         own = np.array([power_of(stored, share * g, case, way) for g in sizes])
-        power[site.node + shift] += own / feeder.network.phases
-        point = sweep(network, loading, feeder.settings, power)
-        voltages.append((np.abs(point.V[:, 0]), point.solved))
-    (out, out_solved), (charged, in_solved) = voltages
-    gain = network.gain
-    allowed = np.full(network.tree.size, np.inf)
-    allowed[shift:] = feeder.change[:, 0]
-    allowed[0] = np.inf if not shift else allowed[0]
-    room = (allowed[:, None] - gain * np.abs(out - charged)).min(axis=0)
-    return np.where(out_solved & in_solved, room, -np.inf)
+        ends.append(_moved_to(feeder, frame, site, own))
+    return _room(feeder, frame, *ends)
 
 
-def _change_system(
-    feeder: Feeder, study: CaseStudy, drawn: Complexes
-) -> tuple[Network, Loading, int]:
-    """Network and loading of the voltage-change check with the queue in place."""
-    posed = with_queue(feeder, study, drawn)
-    if posed is None:
-        posed = study.posed
-    last = posed[-1]
-    return last.system.network, last.system.loading, last.shift
+@dataclass(frozen=True)
+class _Frame:
+    """Where a voltage change is counted: behind the source impedance where one is given."""
+
+    network: Network
+    loading: Loading
+    power: Complexes
+    shift: int
+
+
+def _change_frame(feeder: Feeder, study: CaseStudy, power: Complexes) -> _Frame:
+    """Frame of the voltage change with ``power`` (n, phases, m) drawn before it."""
+    loading, network = study.held.loading, study.posed[0].system.network
+    if len(study.posed) == 1:
+        return _Frame(network, loading, power, 0)
+    base = sweep(network, loading, feeder.settings, power)
+    pad = np.zeros((1, *power.shape[1:]))
+    return _Frame(
+        study.posed[1].system.network,
+        behind_loading(loading, _emf(feeder, base)),
+        np.concatenate([pad, power]),
+        1,
+    )
+
+
+def _moved_to(feeder: Feeder, frame: _Frame, site: Site, own: Complexes) -> OperatingPoint:
+    """Operating points with ``own`` (m,) drawn at the site on top of the frame's power."""
+    m = max(own.size, frame.power.shape[2])
+    power = np.array(np.broadcast_to(frame.power, (*frame.power.shape[:2], m)))
+    power[site.node + frame.shift] += own / feeder.network.phases
+    return sweep(frame.network, frame.loading, feeder.settings, power)
+
+
+def _room(feeder: Feeder, frame: _Frame, a: OperatingPoint, b: OperatingPoint) -> Floats:
+    """Least room left by the change between two points, (m,)."""
+    moved = frame.network.gain * np.abs(np.abs(a.V[:, 0]) - np.abs(b.V[:, 0]))
+    # The source bus counts where it moves, that is behind a source impedance.
+    allowed = feeder.change[:, 0] if frame.shift else feeder.change[1:, 0]
+    room = (allowed[:, None] - moved[1:]).min(axis=0)
+    return np.where(a.solved & b.solved, room, -np.inf)
 
 
 def least_slack(
@@ -253,6 +279,7 @@ def least_slack(
     """
     site, feeder = line.sites[at], line.feeder
     least = np.full(size.size, np.inf)
+    changes = bool(np.isfinite(feeder.change).any())
     for way in site.ways:
         for study in line.studies[way]:
             if draw_of(site, study.case, way) == 0:
@@ -261,45 +288,29 @@ def least_slack(
                 [reserved_power(feeder, s, line.sites, study.case, way) for s in sizes], axis=2
             )
             own = np.array([power_of(site, g, study.case, way, limited=limited) for g in size])
-            least = np.minimum(least, _case_slack(line, site, study, others, own))
+            least = np.minimum(least, _steady_slack(line, site, study, others, own))
+            if not changes:
+                continue
+            frame = _change_frame(feeder, study, study.held.loading.power + others)
+            still = _moved_to(feeder, frame, site, np.zeros(1, dtype=complex))
+            least = np.minimum(
+                least, _room(feeder, frame, _moved_to(feeder, frame, site, own), still)
+            )
             if way == EXPORT and any(p.technology.direction == BOTH for p in site.parts):
-                for column in range(size.size):
-                    room = swing_room(
-                        line, site, study, others[..., column : column + 1],
-                        size[column : column + 1],
-                    )  # fmt: skip
-                    least[column] = min(least[column], float(room[0]))
+                least = np.minimum(least, swing_room(line, site, study, others, size))
     return least
 
 
-def _case_slack(
+def _steady_slack(
     line: Line, site: Site, study: CaseStudy, others: Complexes, own: Complexes
 ) -> Floats:
-    """Least slack of one case, (m,): steady limits, then the voltage change."""
-    feeder, settings = line.feeder, line.feeder.settings
+    """Least slack of one case's steady limits with the site at its power, (m,)."""
+    feeder = line.feeder
     steady = study.posed[0].system
-    network, phases = steady.network, feeder.network.phases
-    before = study.held.loading.power + others
-    after = before.copy()
-    after[site.node] += own / phases
-    loading = study.held.loading
-    base = sweep(network, loading, settings, before)
-    point = sweep(network, loading, settings, after)
+    power = study.held.loading.power + others
+    power[site.node] += own / feeder.network.phases
+    point = sweep(steady.network, study.held.loading, feeder.settings, power)
     limits = split_limits(steady.limits)
-    room = slack(limits, measure(network, limits, point))
+    room = slack(limits, measure(steady.network, limits, point))
     least = room.min(axis=0, initial=np.inf, where=(limits.criterion >= 0)[:, None])
-    least = np.where(base.solved & point.solved, least, -np.inf)
-    if not np.isfinite(feeder.change).any():
-        return least
-    shift = 0
-    if len(study.posed) > 1:
-        network = study.posed[1].system.network
-        loading = behind_loading(loading, _emf(feeder, base))
-        pad = np.zeros((1, *before.shape[1:]))
-        base = sweep(network, loading, settings, np.concatenate([pad, before]))
-        point = sweep(network, loading, settings, np.concatenate([pad, after]))
-        shift = 1
-    moved = network.gain * np.abs(np.abs(point.V[:, 0]) - np.abs(base.V[:, 0]))
-    allowed = feeder.change[:, 0] if shift else feeder.change[1:, 0]
-    change = (allowed[:, None] - moved[1:]).min(axis=0)
-    return np.where(base.solved & point.solved, np.minimum(least, change), -np.inf)
+    return np.where(point.solved, least, -np.inf)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import datetime as dt
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import pandas as pd
@@ -40,14 +40,15 @@ ALL_PROVEN, NOT_ALL_PROVEN = 0, 4
 
 @dataclass(frozen=True, eq=False)
 class Report:
-    """Result sheets by name, what the terminal and the machine are told, and the exit code."""
+    """Result sheets by name, what terminal and machine are told, exit code, letters by name."""
 
     tables: dict[str, pd.DataFrame]
     overview: dict[str, object]
     exit_code: int
+    letters: dict[str, str] = field(default_factory=dict)
 
 
-class _Clock:
+class Clock:
     """Wall time per stage, for the `timing` sheet."""
 
     def __init__(self) -> None:
@@ -57,6 +58,7 @@ class _Clock:
         self.last = time.perf_counter()
 
     def lap(self, stage: str) -> None:
+        """Note the wall time since the last lap."""
         now = time.perf_counter()
         self.rows.append((f"{stage} s", round(now - self.last, 3)))
         self.last = now
@@ -83,7 +85,7 @@ def check_report(path: Path, options: Options) -> Report:
         "base_cases": base_cases_table(feeder, base),
         "run": run_table(loaded, None, options),
     }
-    overview = _heading(loaded) | {
+    overview = feeder_heading(loaded) | {
         "base_cases": tables["base_cases"].to_dict("records"),
         "conditions": tables["conditions"].to_dict("records"),
         "audit": tables["audit"].to_dict("records"),
@@ -99,7 +101,7 @@ def host_report(path: Path, options: Options) -> Report:
     InputError, NoSolutionError, UsageError
         As :func:`check_report`, and for options that name something unknown.
     """
-    clock = _Clock()
+    clock = Clock()
     loaded = load_feeder(path)
     clock.lap("read and check")
     hosting = host(loaded.feeder, options)
@@ -129,7 +131,8 @@ def _exit_code(hosting: Hosting) -> int:
     return ALL_PROVEN if trusted(hosting) else NOT_ALL_PROVEN
 
 
-def _heading(loaded: Loaded) -> dict[str, object]:
+def feeder_heading(loaded: Loaded) -> dict[str, object]:
+    """Return what every answer starts with: the feeder, its date, cases, audit, cautions."""
     feeder = loaded.feeder
     number: Callable[[Severity], int] = lambda s: sum(f.severity is s for f in loaded.findings)  # noqa: E731
     return {
@@ -147,7 +150,7 @@ def _overview(
     loaded: Loaded, hosting: Hosting, tables: dict[str, pd.DataFrame]
 ) -> dict[str, object]:
     return (
-        _heading(loaded)
+        feeder_heading(loaded)
         | {"cases": [c.name for c in hosting.feeder.cases], "solver": hosting.solver}
         | counts(hosting)
         | {

@@ -14,17 +14,21 @@ from feederhost.feeder.model import EXPORT, Feeder
 from feederhost.flow.limits import Quantity
 from feederhost.flow.search import WATCHED
 from feederhost.schema import BASES, LIMIT_CRITERIA, RESULT, Criterion, Proof, State
-from feederhost.study.cases import case_scale
+from feederhost.study.cases import Posed, case_scale
 from feederhost.study.rows import Hosting, HostingRow, element_name
 
 _HOSTED = (State.HOSTED, State.HOSTED_BASE_VIOLATION)
 
 
-def _frame(sheet: str, rows: Iterable[dict[str, object]]) -> pd.DataFrame:
-    return pd.DataFrame(list(rows), columns=list(RESULT[sheet].names), dtype=object)
+def result_frame(sheet: str, rows: Iterable[dict[str, object]]) -> pd.DataFrame:
+    """Lay rows out as a result sheet: its columns in order, None where a row has nothing."""
+    names = RESULT[sheet].names
+    cells = [[row.get(name) for name in names] for row in rows]
+    return pd.DataFrame(cells, columns=list(names), dtype=object)
 
 
-def _kw(feeder: Feeder, value: float) -> float | None:
+def in_kw(feeder: Feeder, value: float) -> float | None:
+    """Per unit to kW; blank where there is no number."""
     return feeder.kw(value) if math.isfinite(value) else None
 
 
@@ -32,7 +36,7 @@ def audit_table(findings: Iterable[Finding]) -> pd.DataFrame:
     """Return the `audit` sheet, the weightiest findings first."""
     order = ("fatal", "warning", "note")
     ranked = sorted(findings, key=lambda f: order.index(f.severity))
-    return _frame(
+    return result_frame(
         "audit",
         (
             {
@@ -47,7 +51,7 @@ def audit_table(findings: Iterable[Finding]) -> pd.DataFrame:
 
 def hosting_table(hosting: Hosting, flags: str = "") -> pd.DataFrame:
     """Return the `hosting` sheet; a row that failed its AC check carries no number."""
-    return _frame("hosting", (_hosting_row(hosting, row, flags) for row in hosting.rows))
+    return result_frame("hosting", (_hosting_row(hosting, row, flags) for row in hosting.rows))
 
 
 def _hosting_row(hosting: Hosting, row: HostingRow, flags: str) -> dict[str, object]:
@@ -59,7 +63,7 @@ def _hosting_row(hosting: Hosting, row: HostingRow, flags: str) -> dict[str, obj
         "proof": str(row.proof), "criterion": str(row.criterion or ""),
         "flags": "; ".join(f for f in (flags, *_row_flags(hosting, row)) if f),
         "input_grade": _grade(hosting, row),
-        "existing_kw": _kw(feeder, float(feeder.existing[k])),
+        "existing_kw": in_kw(feeder, float(feeder.existing[k])),
     }  # fmt: skip
     if row.state is State.NOT_ANALYSED:
         return out
@@ -69,9 +73,9 @@ def _hosting_row(hosting: Hosting, row: HostingRow, flags: str) -> dict[str, obj
         return out
     size = math.hypot(1, row.candidate.reactive)
     out |= {
-        "hosting_kw": _kw(feeder, row.hosting), "hosting_kva": _kw(feeder, row.hosting * size),
-        "hosting_unrounded_kw": _kw(feeder, row.rating),
-        "upper_bound_kw": _kw(feeder, row.upper),
+        "hosting_kw": in_kw(feeder, row.hosting), "hosting_kva": in_kw(feeder, row.hosting * size),
+        "hosting_unrounded_kw": in_kw(feeder, row.rating),
+        "upper_bound_kw": in_kw(feeder, row.upper),
         "reverse_at_head_kw": _reverse(feeder, row),
     }  # fmt: skip
     if math.isfinite(row.upper) and row.rating > 0:
@@ -79,12 +83,14 @@ def _hosting_row(hosting: Hosting, row: HostingRow, flags: str) -> dict[str, obj
     second = _next(row)
     if second is not None:
         out["next_criterion"] = str(LIMIT_CRITERIA[second])
-        out["next_kw"] = _kw(feeder, float(row.by_group[second]))
+        out["next_kw"] = in_kw(feeder, float(row.by_group[second]))
     if row.evidence is not None and row.evidence.relaxed is not None:
-        out["fictitious_loss_kw"] = _kw(feeder, row.evidence.relaxed.loss_gap)
+        out["fictitious_loss_kw"] = in_kw(feeder, row.evidence.relaxed.loss_gap)
     if row.study is not None:
         out["case"] = row.study.case.name
-        out |= _at_limit(feeder, row)
+        if row.limit >= 0 and row.criterion is not None:
+            posed = row.study.posed[row.posed]
+            out |= at_limit(feeder, row.criterion, posed, row.limit, row.value)
     return out
 
 
@@ -99,24 +105,21 @@ def _next(row: HostingRow) -> int | None:
 
 def _reverse(feeder: Feeder, row: HostingRow) -> float | None:
     """Rating at which the head first exports; only an export can bring it about."""
-    return _kw(feeder, float(row.by_group[WATCHED])) if row.direction == EXPORT else None
+    return in_kw(feeder, float(row.by_group[WATCHED])) if row.direction == EXPORT else None
 
 
-def _at_limit(feeder: Feeder, row: HostingRow) -> dict[str, object]:
-    """Element, measured value and limit in the units of the trade."""
-    assert row.study is not None
-    if row.limit < 0 or row.criterion is None:
-        return {}
-    posed = row.study.posed[row.posed]
+def at_limit(
+    feeder: Feeder, criterion: Criterion, posed: Posed, row: int, value: float
+) -> dict[str, object]:
+    """Element, measured value and limit of a limit row in the units of the trade."""
     limits, network = posed.system.limits, posed.system.network
-    element, phase = int(limits.element[row.limit]), int(limits.phase[row.limit])
+    element, phase = int(limits.element[row]), int(limits.phase[row])
     k = element - posed.shift
-    bound, value = float(limits.bound[row.limit]), row.value
-    quantity = limits.quantity[row.limit]
+    bound, quantity = float(limits.bound[row]), limits.quantity[row]
     gain = float(network.gain[element, phase])
     if quantity == Quantity.VOLTAGE:
         shown, limit, unit = math.sqrt(value) * gain, math.sqrt(bound) * gain, "pu"
-        if row.criterion is Criterion.VOLTAGE_CHANGE:
+        if criterion is Criterion.VOLTAGE_CHANGE:
             base = float(np.abs(posed.base.V[element, phase, 0])) * gain
             shown, limit, unit = 100 * abs(shown - base), 100 * abs(limit - base), "%"
     elif quantity in (Quantity.CURRENT_FROM, Quantity.CURRENT_TO):
@@ -127,10 +130,10 @@ def _at_limit(feeder: Feeder, row: HostingRow) -> dict[str, object]:
     elif quantity == Quantity.BANK_POWER:
         shown, limit, unit = feeder.kw(math.sqrt(value)), feeder.kw(math.sqrt(bound)), "kVA"
     else:
-        sign = 1 if limits.upper[row.limit] else -1
+        sign = 1 if limits.upper[row] else -1
         shown, limit, unit = sign * feeder.kw(value), sign * feeder.kw(bound), "kW"
     return {
-        "element": element_name(feeder, row.criterion, k), "value_at_limit": shown,
+        "element": element_name(feeder, criterion, k), "value_at_limit": shown,
         "limit_value": limit, "unit": unit,
     }  # fmt: skip
 
@@ -139,8 +142,10 @@ def _row_flags(hosting: Hosting, row: HostingRow) -> list[str]:
     feeder = hosting.feeder
     flags = []
     if row.broken:
-        more = f" and {len(row.broken) - 3} more" if len(row.broken) > 3 else ""
-        flags.append("base violation: " + ", ".join(row.broken[:3]) + more)
+        most = feeder.settings.flag_elements
+        more = len(row.broken) - most
+        rest = f" and {more} more (sheet base)" if more > 0 else ""
+        flags.append("base violation: " + ", ".join(row.broken[:most]) + rest)
     bank = row.criterion is Criterion.BANK_RATING
     if bank and row.study is not None and not row.study.case.bank_known:
         flags.append("bank may be shared with other feeders")
@@ -165,9 +170,9 @@ def criteria_table(hosting: Hosting) -> pd.DataFrame:
     for row in hosting.rows:
         out: dict[str, object] = _label(feeder, row)
         for g, criterion in enumerate(LIMIT_CRITERIA):
-            out[f"{criterion}_kw"] = _kw(feeder, float(row.by_group[g]))
+            out[f"{criterion}_kw"] = in_kw(feeder, float(row.by_group[g]))
         rows.append(out)
-    return _frame("criteria", rows)
+    return result_frame("criteria", rows)
 
 
 def _label(feeder: Feeder, row: HostingRow) -> dict[str, object]:
@@ -195,12 +200,13 @@ def relaxation_table(hosting: Hosting) -> pd.DataFrame:
                     "iterations": own.relaxed.answer.iterations,
                 }  # fmt: skip
                 if row.proof is not Proof.FAILED:
-                    out["priced_kw"] = _kw(feeder, own.relaxed.g)
+                    out["priced_kw"] = in_kw(feeder, own.relaxed.g)
             if own.plain is not None and row.proof is not Proof.FAILED:
-                out["plain_kw"] = _kw(feeder, own.plain.g)
-                out["plain_fictitious_loss_kw"] = _kw(feeder, own.plain.loss_gap)
+                out["plain_kw"] = in_kw(feeder, own.plain.g)
+                out["plain_fictitious_loss_kw"] = in_kw(feeder, own.plain.loss_gap)
+                out["plain_outcome"] = own.plain_outcome
         rows.append(out)
-    return _frame("relaxation", rows)
+    return result_frame("relaxation", rows)
 
 
 def _finite(value: float) -> float | None:
@@ -220,7 +226,7 @@ def profile_table(hosting: Hosting) -> pd.DataFrame:
         if own:
             worst = min(own, key=lambda r: r.rating)
             rows += _profile_rows(feeder, worst)
-    return _frame("profile", rows)
+    return result_frame("profile", rows)
 
 
 def _profile_rows(feeder: Feeder, row: HostingRow) -> list[dict[str, object]]:
