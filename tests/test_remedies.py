@@ -23,6 +23,7 @@ from feederhost.study.sites import read_sites
 
 from engine import load, two_bus
 from judge import worst_slack
+from random_feeders import random_feeder, rows_to_test
 from test_curves import bisect, volt_var, volt_watt, voltage
 
 Tables = dict[str, list[dict[str, Any]]]
@@ -261,6 +262,29 @@ def test_a_hunting_inverter_is_not_offered():
     assert "hunts" in own.note
 
 
+def test_the_chargers_of_a_site_are_not_helped_by_its_inverter():
+    # PV of 500 kW fits; 2000 kW of charging at the same site do not, and no curve acts there.
+    tables = two_bus(3 + 6j, **request(500))
+    tables["requests"].append({**tables["requests"][0], "technology": "ev", "kw": 2000})
+    rows = found(tables)
+    assert rows["smaller_size"].criterion == "voltage_low"
+    for name in ("fixed_power_factor", "volt_var", "volt_watt"):
+        assert refused(rows[name])
+        assert rows[name].criterion in ("", "voltage_low")
+
+
+def test_an_export_limit_counts_with_a_curve_too():
+    # Half of 3000 kW is the most that leaves: q is -0.22 or less of the rated 3000 all the same.
+    tables = two_bus(3 + 6j, **request(3000, export_limit_kw=2100))
+    own = found(tables)["volt_var"]
+    assert own.kw == 3000.0
+
+    def gap(q: float) -> float:
+        return volt_var(voltage(0.03, 0.06, 2.1, q)) * 3.0 - q
+
+    assert voltage(0.03, 0.06, 2.1, bisect(gap, -1.32, 1.32)) <= 1.05
+
+
 STORAGE = {"limits": {"voltage_change_mv_pct": 3}, "case": {"load_scale": 1}}
 
 
@@ -481,18 +505,15 @@ def stepped_down(kw: float = 700, *, flipped: bool = False, **more: Any) -> Tabl
     return {**tables, "transformers": [unit]}
 
 
-@pytest.mark.parametrize(("flipped", "tap"), [(False, 1.025), (True, 0.975)])
+@pytest.mark.parametrize(("flipped", "tap"), [(False, 0.975), (True, 1.025)])
 def test_a_transformer_tap(flipped: bool, tap: float):
-    # V(N) = 1.0 + 0.02 * 0.9 + 0.019 * 0.9 or so; one tap takes 2.5 % off.
-    more = {"tap_pu": 0.975 if not flipped else 1.025}
-    tables = stepped_down(flipped=flipped, **more)
+    # 0.975 raises the secondary by 2.5 %; fed from there, 1.025 raises the primary.
+    tables = stepped_down(flipped=flipped, tap_pu=tap)
     own = found(tables)["regulator_setting"]
-    assert own.kw == 700.0
-    new = float(own.setting.split("-> ")[1])
-    assert own.setting == f"transformer T1: tap_pu {more['tap_pu']:g} -> {new:g}"
-    assert new == 1.0
-    moved = [{**tables["transformers"][0], "tap_pu": new}]
+    assert (own.setting, own.kw) == (f"transformer T1: tap_pu {tap:g} -> 1", 700.0)
+    moved = [{**tables["transformers"][0], "tap_pu": 1.0}]
     assert judged({**tables, "transformers": moved}, 700) >= 0
+    assert judged(tables, 700) < 0
 
 
 def test_no_setting_helps_a_rating():
@@ -562,6 +583,32 @@ def test_it_is_the_next_size_and_not_the_largest():
         "line L2: thick -> thicker": stop_kw(rebuilt(tables, "L2", "thicker")),
     }
     assert rows["larger_conductor"].setting == max(bought, key=lambda name: bought[name])
+
+
+def test_the_best_of_many_elements_and_cases():
+    # A feeder on which cases and elements bind in turn: the outcome is that of trying them all.
+    kilometres = (0.5, 0.2, 0.9, 0.4, 0.7)
+    names = ["S", "A", "B", "C", "D", "N"]
+    tables = two_lines(4000)
+    tables["lines"] = [
+        {"line": f"L{i}", "from_node": names[i], "to_node": names[i + 1],
+         "conductor": "thick" if i == 2 else "thin", "length_km": km}
+        for i, km in enumerate(kilometres)
+    ]  # fmt: skip
+    tables["loads"] = [{"node": name, "kw": 100, "kvar": 40} for name in names[1:]]
+    tables["cases"] = [
+        {"case": f"c{i}", "load_scale": load, "pv_scale": pv, "source_voltage_pu": v}
+        for i, (load, pv, v) in enumerate([(0.9, 1.0, 1.01), (0.2, 0.6, 1.03), (0.3, 0.8, 1.02)])
+    ]
+    next_size = {"thin": "thick", "thick": "thicker"}
+    bought = {
+        row["line"]: stop_kw(rebuilt(tables, row["line"], next_size[row["conductor"]]))
+        for row in tables["lines"]
+    }
+    best = max(bought, key=lambda name: bought[name])
+    own = found(tables)["larger_conductor"]
+    assert own.setting.startswith(f"line {best}: ")
+    assert own.kw == math.floor(bought[best])
 
 
 def test_it_may_carry_what_is_asked():
@@ -664,6 +711,41 @@ def test_every_offer_holds_with_the_queue_in_place():
     pf = float(rows["fixed_power_factor"].setting.split()[0])
     fixed = rows["fixed_power_factor"]
     assert judged(with_power_factor(there, pf), fixed.kw, technology="pv_q") >= 0
+
+
+def built_in(tables: Tables, own: Remedy) -> Tables:
+    """Return a workbook with a regulator setting or larger transformer built in."""
+    what, new = own.setting.split(": ")[0], own.setting.split("-> ")[1]
+    kind, name = what.split(" ", 1)
+    rows = []
+    for row in tables[f"{kind}s"]:
+        if row[kind] == name and kind == "regulator" and "setpoint" in own.setting:
+            row = {**row, "setpoint_pu": float(new.split()[0]), "setpoint_kv": None}
+        elif row[kind] == name and kind == "regulator":
+            row = {**row, "tap": float(new), "tap_a": None, "tap_b": None, "tap_c": None}
+        elif row[kind] == name and own.remedy == "regulator_setting":
+            row = {**row, "tap_pu": float(new)}
+        elif row[kind] == name:
+            same = [r for r in tables["transformers"] if f"{r['kva']:g} kVA" == new]
+            keep = {k: row.get(k) for k in ("transformer", "from_node", "to_node", "tap_pu")}
+            row = {**same[0], **keep}
+        rows.append(row)
+    return {**tables, f"{kind}s": rows}
+
+
+@pytest.mark.parametrize("seed", [0, 3, 4, 5, 7, 10, 16, 21])
+def test_offers_on_random_feeders_hold_before_the_judge(seed: int):
+    tables: Tables = random_feeder(seed)
+    node, technology = rows_to_test(seed, 1)[0]
+    asked = request(1, node, technology)
+    tables = {**tables, **asked}
+    asked["requests"][0]["kw"] = math.ceil(1.3 * stop_kw(tables)) + 2
+    rows = found(tables)
+    for name in ("smaller_size", "regulator_setting", "larger_transformer"):
+        if name in rows and not math.isnan(rows[name].kw):
+            own = rows[name]
+            there = tables if name == "smaller_size" else built_in(tables, own)
+            assert judged(there, own.kw, node, technology) >= 0, own
 
 
 # --- costs -----------------------------------------------------------------------------------
