@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import functools
 import sys
+import traceback
 from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -50,7 +51,7 @@ def _guarded(command: Callable[..., int | None]) -> Callable[..., None]:
 
 def _fail(error: BaseException, debug: bool) -> None:
     if debug:
-        raise error
+        click.echo("".join(traceback.format_exception(error)), err=True, nl=False)
     text = str(error) or type(error).__name__
     click.echo(f"feederhost: {' '.join(text.split())}", err=True)
     sys.exit(getattr(error, "exit_code", 1))
@@ -59,7 +60,7 @@ def _fail(error: BaseException, debug: bool) -> None:
 def _output_options(command: Callable[..., Any]) -> Callable[..., Any]:
     for option in (
         click.option("--json", "json_out", is_flag=True, help="Print the answer as JSON."),
-        click.option("-q", "--quiet", is_flag=True, help="Print nothing on standard output."),
+        click.option("-q", "--quiet", is_flag=True, help="Print no summary on standard output."),
         click.option("--csv", "as_csv", is_flag=True,
                      help="Write the output as a folder of csv files."),
     ):  # fmt: skip
@@ -85,6 +86,8 @@ def blank(feeder: Path) -> None:
 
     if feeder.exists():
         raise OutputError(f"{feeder} is there already; name a new file")
+    if feeder.suffix.lower() != ".xlsx":
+        raise OutputError(f"{feeder} must end in .xlsx")
     write_blank(feeder)
     click.echo(f"{feeder}: fill in `source` and `lines` first, then `loads`")
 
@@ -241,7 +244,9 @@ def _run(
     from feederhost.sheets.writing import write_result
 
     if output is not None:
-        _refuse_overwriting(feeder, output)
+        _refuse(feeder, output, as_csv)
+    elif as_csv:
+        raise click.UsageError("--csv needs an output: -o FOLDER")
     try:
         with ProgressLine(quiet) as progress:
             report = report_of(feeder, make_options(progress=progress))
@@ -264,6 +269,12 @@ def _run(
     return report.exit_code
 
 
-def _refuse_overwriting(feeder: Path, output: Path) -> None:
-    if output.exists() and feeder.exists() and output.resolve() == feeder.resolve():
-        raise OutputError(f"the output {output} is the input itself; name another file")
+def _refuse(feeder: Path, output: Path, as_csv: bool) -> None:
+    """Refuse, before anything is computed, an output that would spoil the input or cannot be."""
+    own, source = output.resolve(), feeder.resolve()
+    if own == source or source in own.parents:
+        raise OutputError(f"the output {output} is in the input itself; name another file")
+    if not own.parent.is_dir():
+        raise OutputError(f"cannot write {output}: there is no folder {own.parent.name}")
+    if not as_csv and output.suffix.lower() != ".xlsx":
+        raise OutputError(f"the output {output} must end in .xlsx (or give --csv for a folder)")

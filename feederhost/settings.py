@@ -283,6 +283,7 @@ class Settings:
     base_cells: int = _setting(
         200_000, "-", "cases x nodes up to which `base` lists everything", _PROJECT
     )
+    digits: int = _setting(13, "-", "significant digits of a published power", _PROJECT)
     flag_elements: int = _setting(
         12, "-", "broken elements named in the flags of a row before '... more'", _PROJECT
     )

@@ -185,7 +185,11 @@ def _tally(count: dict[str, int]) -> str:
 
 
 def _warned(overview: dict[str, Any]) -> list[str]:
-    return [f"audit     {overview['warnings']} warnings, {overview['notes']} notes"]
+    warnings, notes = overview["warnings"], overview["notes"]
+    return [
+        f"audit     {warnings} warning{'' if warnings == 1 else 's'}, "
+        f"{notes} note{'' if notes == 1 else 's'}"
+    ]
 
 
 def _cautions(overview: dict[str, Any]) -> list[str]:

@@ -29,6 +29,10 @@ def tables(**changed: list[dict[str, Any]]) -> Tables:
             {"line": "L2", "from_node": "A", "to_node": "B"} | line,
         ],
         "loads": [{"node": "B", "kw": 200, "kvar": 60}],
+        "requests": [
+            {"request": "Q1", "node": "B", "technology": "pv", "kw": 900, "received": "2026-01-02"},
+            {"request": "Q2", "node": "A", "technology": "pv", "kw": 900, "received": "2026-01-03"},
+        ],
     }
     return sound | changed
 

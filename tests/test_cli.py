@@ -79,7 +79,7 @@ def test_check_writes_base_cases_and_conditions(feeder, tmp_path):
     )
 
 
-@pytest.mark.parametrize("command", ["host", "check"])
+@pytest.mark.parametrize("command", ["host", "check", "screen"])
 def test_quiet_prints_nothing(command, feeder, tmp_path):
     done = run(command, feeder, "-q", "-o", tmp_path / "r.xlsx")
     assert (done.exit_code, done.output) == (0, "")
@@ -233,7 +233,7 @@ def finding_lines(stderr: str) -> list[str]:
 
 
 @pytest.mark.parametrize("quiet", [[], ["--quiet"], ["--json"]])
-@pytest.mark.parametrize("command", ["host", "check"])
+@pytest.mark.parametrize("command", ["host", "check", "screen"])
 def test_fatal_findings_stand_one_a_line_on_standard_error(command, quiet, tmp_path):
     done = run(command, write(tmp_path, UNSOUND), "-o", tmp_path / "r.xlsx", *quiet)
     assert (done.exit_code, done.stdout) == (3, "")
@@ -242,7 +242,7 @@ def test_fatal_findings_stand_one_a_line_on_standard_error(command, quiet, tmp_p
         assert " - " in line
 
 
-@pytest.mark.parametrize("command", ["host", "check"])
+@pytest.mark.parametrize("command", ["host", "check", "screen"])
 def test_with_fatal_findings_their_audit_is_all_that_is_written(command, tmp_path):
     spoilt = write(tmp_path, UNSOUND)
     run(command, spoilt, "-q", "-o", tmp_path / "r.xlsx")
@@ -257,7 +257,7 @@ def test_with_fatal_findings_their_audit_is_all_that_is_written(command, tmp_pat
     assert os.listdir(tmp_path / "folder") == ["audit.csv"]
 
 
-@pytest.mark.parametrize("command", ["host", "check"])
+@pytest.mark.parametrize("command", ["host", "check", "screen"])
 def test_a_base_case_without_solution_leaves_nothing_behind(command, tmp_path):
     done = run(command, write(tmp_path, HOPELESS), "-o", tmp_path / "r.xlsx")
     assert (done.exit_code, done.stdout) == (3, "")
@@ -267,7 +267,7 @@ def test_a_base_case_without_solution_leaves_nothing_behind(command, tmp_path):
 
 
 @pytest.mark.parametrize("content", [None, b"no workbook"], ids=["missing", "not a workbook"])
-@pytest.mark.parametrize("command", ["host", "check"])
+@pytest.mark.parametrize("command", ["host", "check", "screen"])
 def test_an_input_that_cannot_be_read(command, content, tmp_path):
     if content is not None:
         (tmp_path / "feeder.xlsx").write_bytes(content)

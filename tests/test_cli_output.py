@@ -137,7 +137,7 @@ def in_common(rows: Iterable[Iterable[object]]) -> list[list[object]]:
     return [[as_number(cell) if cell is not None else "" for cell in row] for row in rows]
 
 
-@pytest.mark.parametrize("command", ["host", "check"])
+@pytest.mark.parametrize("command", ["host", "check", "screen"])
 def test_the_csv_folder_holds_what_the_workbook_holds(command, feeder, tmp_path):
     assert run(command, feeder, "-q", "-o", tmp_path / "r.xlsx").exit_code == 0
     assert run(command, feeder, "-q", "--csv", "-o", tmp_path / "r").exit_code == 0

@@ -9,14 +9,14 @@ from functools import lru_cache
 
 import numpy as np
 import pytest
-
-from engine import answer as hosted
-from engine import load, row_of
 from feederhost.errors import UsageError
 from feederhost.schema import Answer, Criterion, Proof
 from feederhost.study.options import Options
 from feederhost.study.queueing import least_slack
 from feederhost.study.requests import Answered, Bench, answer, judge, set_up
+
+from engine import answer as hosted
+from engine import load, row_of
 from judge import worst_slack
 
 NO_REMEDIES = Options(remedies=False)

@@ -169,7 +169,10 @@ def test_flags_of_a_bank_that_may_be_shared() -> None:
 
 def test_a_feeder_that_may_not_export() -> None:
     # Unity power factor: at 200 kW nothing flows at all, and the head is at its limit of zero.
-    tables = feeder(source={"export_limit_kw": 0}, loads=[{"node": "N", "kw": 200}])
+    tables = feeder(
+        source={"export_limit_kw": 0}, loads=[{"node": "N", "kw": 200}], case={"ev_scale": 0}
+    )
+    tables["candidates"] = [{"node": "N", "technology": "pv"}]
     answer = report(tables)
     found = line_of(answer.tables["hosting"], "N", "pv")
     assert (found["criterion"], found["limit_value"]) == ("head_export", 0.0)

@@ -201,6 +201,12 @@ def test_the_hours_of_a_technology(rows, technologies, least, hours):
     assert found.verdict == "pass"
 
 
+@pytest.mark.parametrize(("hour", "counts"), [(9, 0), (10, 1), (16, 1), (17, 0)])
+def test_both_ends_of_the_hours_belong_to_them(hour, counts):
+    found = one(small(cases=[case("noon", 12, 0.5), case("edge", hour, 0.2)]), "minimum load")
+    assert found.threshold == pytest.approx(40 if counts else 100)
+
+
 def test_cases_without_hours_are_shown_and_not_assessed():
     cases = [case("peak", None, 1.0), case("low", None, 0.2, pv_scale=1)]
     found = one(small(cases=cases), "minimum load")
@@ -277,6 +283,13 @@ def test_the_fault_current_of_a_request_goes_by_nameplate(row, kva, known):
     assert found.quantity == pytest.approx((kva + 12) / 1e3 * AMPS)
     assert found.threshold == pytest.approx(115.470, rel=1e-5)
     assert found.verdict == ("pass" if kva <= 1988 else "fail")
+
+
+def test_plants_that_are_there_count_at_their_power_factor():
+    # 60 kW at 0.6 are 100 kVA.
+    generators = [{"node": "A", "kw": 60, "power_factor": 0.6, "vars": "absorb"}]
+    found = one(small(generators=generators), "fault current")
+    assert found.quantity == pytest.approx(1.2 * 0.130 * AMPS)
 
 
 def test_an_inverter_grows_with_a_site_that_is_given_less():

@@ -88,6 +88,23 @@ def test_all_generation_is_what_is_there_before_and_asked():
     assert again.quantity == pytest.approx(100 * (v - raised(R, -0.05)), rel=1e-9)
 
 
+def test_coincidence_belongs_to_what_is_asked_for():
+    # 100 kW are there and run whole; of 800 kW asked half is seen at once.
+    own = [{"technology": "half", "direction": "export", "coincidence": 0.5}]
+    rows, there = (
+        [request("Q1", "N", "half", 800)],
+        [{"node": "N", "kw": 100, "technology": "half"}],
+    )
+    alone, together = changes(two_nodes(rows, generators=there, technologies=own))
+    assert together.quantity == pytest.approx(100 * (raised(R, P) - 1), rel=1e-9)
+    assert alone.quantity == pytest.approx(100 * (raised(R, P) - raised(R, 0.1)), rel=1e-9)
+
+
+def test_a_request_is_not_its_own_forerunner():
+    tables = two_nodes([request("Q1", "N", "pv", 500)])
+    assert changes(tables, sizes={"Q1": 300}) == changes(tables)
+
+
 def test_each_verdict_of_both_changes():
     tables = two_nodes(
         [request("Q1", "N", "pv", 300)], generators=[{"node": "N", "kw": 400}],

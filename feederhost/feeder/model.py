@@ -135,8 +135,8 @@ class Feeder:
         return next(t for t in self.technologies if t.name == name)
 
     def kw(self, per_unit: float) -> float:
-        """Per unit to kW, kvar or kVA."""
-        return per_unit * self.settings.base_mva * 1e3
+        """Per unit to kW, kvar or kVA, without the dust of the conversion."""
+        return float(f"{per_unit * self.settings.base_mva * 1e3:.{self.settings.digits}g}")
 
     def amps(self, per_unit: float, node: int) -> float:
         """Per unit current at a node's base voltage to A."""

@@ -20,7 +20,7 @@ from feederhost.feeder.case_rules import case_rules, node_rules, read_limits, so
 from feederhost.feeder.columns import Checked, read_sheet, records
 from feederhost.feeder.names import did_you_mean, fold, near_index
 from feederhost.feeder.plant_rules import iso_date, load_rules, plant_rules, technology_rules
-from feederhost.schema import INPUT
+from feederhost.schema import GUIDE, INPUT
 from feederhost.settings import Settings
 
 _IDS = {
@@ -143,7 +143,7 @@ def never_fatal_in_requests(finding: Finding) -> Finding:
 def _sheet_findings(raw: Mapping[str, pd.DataFrame]) -> list[Finding]:
     """Return what there is to say about sheets that are missing, empty or unknown."""
     found: list[Finding] = []
-    unknown = [name for name in raw if name not in INPUT]
+    unknown = [name for name in raw if name not in INPUT and name != GUIDE]
     index = near_index(INPUT)
     for name in unknown:
         hint = did_you_mean(fold(name), index)

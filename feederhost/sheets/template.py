@@ -145,12 +145,22 @@ def save_settled(book: Workbook, path: Path) -> None:
             target.writestr(entry, source.read(name))
 
 
+# Limits that are off, or follow another one, until a value is given.
+_LIMIT_EXAMPLES = {
+    "v_min_primary_pu": 0.975, "v_max_primary_pu": 1.05, "export_limit_kw": 5000,
+    "import_limit_kw": 10000, "search_cap_kw": 20000,
+}  # fmt: skip
+
+
 def _examples(sheet: Sheet) -> list[dict[str, Any]]:
     """Return the example rows of a sheet, each made a comment by its first cell."""
     example = {c.key: c.example for c in sheet.columns if c.example is not None}
     rows: list[dict[str, Any]] = [example]
     if sheet.name == "limits":
-        rows = [{"limit": f.name, "value": f.default} for f in sheet_settings()]
+        rows = [
+            {"limit": f.name, "value": _LIMIT_EXAMPLES.get(f.name, f.default)}
+            for f in sheet_settings()
+        ]
     elif sheet.name == "cases":
         rows = [dict(case) for case in BUILT_IN_CASES]
     elif sheet.name == "technologies":

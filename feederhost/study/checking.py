@@ -66,7 +66,10 @@ def _check_block(
     """Fold one case's slacks at the value, and just above it, into the running worst."""
     settings = feeder.settings
     value = np.array([rows[i].hosting for i in which])
-    over = np.array([rows[i].rating for i in which]) * (1 + settings.above_share)
+    # Where the solution itself is lost is located less closely than a limit.
+    lost = np.array([rows[i].limit < 0 and rows[i].study is not None for i in which])
+    share = np.where(lost, settings.search_lost_share, settings.above_share)
+    over = np.array([rows[i].rating for i in which]) * (1 + share)
     over = np.maximum(over, settings.tiny_rating)
     candidates = [rows[i].candidate for i in which]
     for posed in study.posed:
@@ -88,8 +91,7 @@ def _judged(
     passes = passes and (row.state is State.CAPPED or above < 0)
     if passes:
         return replace(row, mismatch=mismatch, slack=least)
-    state = row.state if row.state is not State.CAPPED else State.HOSTED
     return replace(
-        row, state=state, proof=Proof.FAILED, criterion=Criterion.AC_CHECK, rating=math.nan,
+        row, state=State.HOSTED, proof=Proof.FAILED, criterion=Criterion.AC_CHECK, rating=math.nan,
         hosting=math.nan, upper=math.nan, by_group=np.full(GROUPS, np.inf), mismatch=mismatch,
     )  # fmt: skip

@@ -15,7 +15,7 @@ HEADING = "Draft for the engineer's review - not a determination"
 _WIDTH = 76
 _WORDS = {
     Answer.FITS: "The size asked for fits, and every rule screen that counts has passed.",
-    Answer.FITS_SCREENS_OPEN: "The size asked for passes the power flow; rule screens are open.",
+    Answer.FITS_SCREENS_OPEN: "It passes the power flow; rule screens failed or lack data.",
     Answer.FITS_WITH_REMEDY: "The size asked for fits only with one of the remedies below.",
     Answer.FITS_UP_TO: "A smaller size fits.",
     Answer.DOES_NOT_FIT: "Nothing fits at this node as the feeder stands.",

@@ -144,9 +144,7 @@ def remedy_row(own: Remedy) -> dict[str, object]:
 
 def queue_row(line: Line, own: Answered) -> dict[str, object]:
     """Return what a request leaves at its node, as the `queue` sheet shows it."""
-    room = math.nan
-    if own.stop is not None and own.proof is not Proof.FAILED:
-        room = max(min(own.stop.rating, line.reach_of(own.site)) - own.reserved, 0.0)
+    room = own.reach if math.isnan(own.reach) else max(own.reach - own.reserved, 0.0)
     return {
         "order": own.site.order, "request": own.site.request,
         "reserved_kw": in_kw(line.feeder, own.reserved),

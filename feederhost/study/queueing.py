@@ -141,6 +141,16 @@ def first_stop(line: Line, at: int, sizes: Mapping[int, float], *, limited: bool
     return best
 
 
+def head_room(line: Line, at: int, sizes: Mapping[int, float], stop: Stop) -> float:
+    """Size up to which a site could grow at its node, inverter and export limit aside."""
+    site = line.sites[at]
+    if math.isinf(stop.rating) and min(site.inverter, site.export_limit) < math.inf:
+        free = replace(site, inverter=math.inf, export_limit=math.inf)
+        sites = (*line.sites[:at], free, *line.sites[at + 1 :])
+        stop = first_stop(replace(line, sites=sites), at, sizes)
+    return min(stop.rating, line.reach_of(site))
+
+
 def _first(
     feeder: Feeder, own: Posed, site: Site, unit: complex, cap: float, settings: Settings
 ) -> Stop:

@@ -24,7 +24,7 @@ from feederhost.study.load import Loaded
 from feederhost.study.nodal import base_solutions, rounded_down
 from feederhost.study.options import Options
 from feederhost.study.proving import Prover
-from feederhost.study.queueing import Line, Stop, first_stop, least_slack
+from feederhost.study.queueing import Line, Stop, first_stop, head_room, least_slack
 from feederhost.study.remedies import Remedy, remedies_of
 from feederhost.study.screens import Screen, ScreenData, screen_data, screen_site
 from feederhost.study.sites import Site, draw_of, read_sites
@@ -47,6 +47,8 @@ class Answered:
         Quantity measured there.
     reserved : float
         What later requests find in place.
+    reach : float
+        Size up to which the site could grow at its node.
     """
 
     site: Site
@@ -57,6 +59,7 @@ class Answered:
     value: float = math.nan
     upper: float = math.nan
     reserved: float = 0.0
+    reach: float = math.nan
     depends_on: tuple[str, ...] = ()
     provisional_on: tuple[str, ...] = ()
     screens: tuple[Screen, ...] = ()
@@ -121,10 +124,15 @@ def answer(bench: Bench, at: int, before: Sequence[Answered]) -> Answered:
     judged = judge(line, bench.prover, at, sizes)
     screens = screen_site(bench.data, at, sizes, site.asked)
     judged = replace(judged, screens=screens, provisional_on=provisional)
+    if judged.stop is not None and judged.proof is not Proof.FAILED:
+        judged = replace(judged, reach=head_room(line, at, sizes, judged.stop))
     if judged.answer is Answer.FITS and open_screens(screens):
         judged = replace(judged, answer=Answer.FITS_SCREENS_OPEN)
     if bench.options.remedies and judged.stop is not None and _short(judged):
-        offered = remedies_of(line, bench.loaded.tables, at, sizes, judged.stop)
+        offered = tuple(
+            replace(r, proof=str(judged.proof)) if r.remedy == "smaller_size" else r
+            for r in remedies_of(line, bench.loaded.tables, at, sizes, judged.stop)
+        )
         judged = replace(judged, remedies=offered)
         if any(_carries(r, site, line.feeder) for r in offered):
             judged = replace(judged, answer=Answer.FITS_WITH_REMEDY)

@@ -10,7 +10,7 @@ import numpy as np
 import pandas as pd
 
 from feederhost.errors import Finding
-from feederhost.feeder.model import EXPORT, Feeder
+from feederhost.feeder.model import Feeder
 from feederhost.flow.limits import Quantity
 from feederhost.flow.search import WATCHED
 from feederhost.schema import BASES, LIMIT_CRITERIA, RESULT, Criterion, Proof, State
@@ -105,7 +105,7 @@ def _next(row: HostingRow) -> int | None:
 
 def _reverse(feeder: Feeder, row: HostingRow) -> float | None:
     """Rating at which the head first exports; only an export can bring it about."""
-    return in_kw(feeder, float(row.by_group[WATCHED])) if row.direction == EXPORT else None
+    return in_kw(feeder, float(row.by_group[WATCHED]))
 
 
 def at_limit(

@@ -49,12 +49,12 @@ def summary_table(
     for line in technology_lines(hosting):
         rows.append((f"hosting {line['technology']}", _sentence(line)))
     rows += _limits_used(feeder)
-    if options.cases:
-        rows.append(("caution", "only these cases were looked at: " + ", ".join(options.cases)))
     if not base_complete:
         rows.append(("base", "lists the binding cases and those of lowest and highest voltage"))
     rows.append(("unlimited elements", ", ".join(unlimited(feeder)) or "none"))
     rows += [("caution", text) for text in cautions(loaded, feeder)]
+    if options.cases:
+        rows.append(("caution", "only these cases were looked at: " + ", ".join(options.cases)))
     rows += [("not covered", text) for text in NOT_COVERED]
     return _pairs("summary", rows)
 
@@ -166,7 +166,7 @@ def run_table(loaded: Loaded, hosting: Hosting | None, options: Options) -> pd.D
         gaps = [
             abs(r.evidence.relaxed.g / r.rating - 1)
             for r in hosting.rows
-            if r.proof is Proof.PROVEN and r.evidence and r.evidence.relaxed
+            if r.proof is Proof.PROVEN and r.rating > 0 and r.evidence and r.evidence.relaxed
         ]
         rows.append(("largest disagreement of proven rows", max(gaps, default=0.0)))
     rows += [

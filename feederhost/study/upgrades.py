@@ -73,6 +73,8 @@ def upgrade(ask: Ask) -> Remedy | None:
     feeders = upgraded(ask, found)
     over = duties_over(ask, feeders)
     barred = [f"{u.setting} would put {what}" for u, what in zip(found, over, strict=True) if what]
+    if _devices_known(ask) and ask.feeder.z_source is None:
+        barred.append("fault duty is not checked: short_circuit_mva is blank")
     kept = [i for i, what in enumerate(over) if not what]
     trials = [
         Trial(found[i].setting, feeders[i], ask.line.sites, restudied(feeders[i])) for i in kept
@@ -113,8 +115,7 @@ def duties_over(ask: Ask, feeders: list[Feeder]) -> list[str]:
     A device that sees no more than before is not the alternative's matter.  The levels are those
     of the interrupting-duty screen: source and path, all generation by nameplate added.
     """
-    known = not all(math.isnan(cells["interrupting_a"]) for _, cells in ask.tables.rows("lines"))
-    if not known or ask.feeder.z_source is None:
+    if not _devices_known(ask) or ask.feeder.z_source is None:
         return [""] * len(feeders)
     data = screen_data(ask.line, ask.tables)
     infeed = trial(data, ask.at, ask.sizes, ask.site.asked).infeed
@@ -123,6 +124,11 @@ def duties_over(ask: Ask, feeders: list[Feeder]) -> list[str]:
         _duty_over(data, screen_data(Line(own, {}, (), 0.0), ask.tables).level, infeed, share)
         for own in feeders
     ]
+
+
+def _devices_known(ask: Ask) -> bool:
+    lines = ask.tables.sheets["lines"]
+    return bool(lines["interrupting_a"].notna().any())
 
 
 def _duty_over(data: ScreenData, level: Floats | None, infeed: float, share: float) -> str:
@@ -213,8 +219,9 @@ def upgraded(ask: Ask, found: list[Upgrade]) -> list[Feeder]:
     """Return the feeder with each upgrade alone, per unit by the way every branch is placed."""
     feeder, tables = ask.feeder, ask.tables
     sheets = {name: tables.sheets[name] for name in tables.sheets}
+    placed_rows = [(feeder.edges[u.node], u.row) for u in found]
     for name in ("lines", "transformers"):
-        own = {feeder.edges[u.node].row: u.row for u in found if _sheet(feeder, u) == name}  # type: ignore[union-attr]
+        own = {e.row: row for e, row in placed_rows if e is not None and e.sheet == name}
         sheets[name] = _with_rows(sheets[name], own)
     changed = replace(tables, sheets=sheets)
     nodes = {u.node for u in found}
@@ -232,11 +239,6 @@ def upgraded(ask: Ask, found: list[Upgrade]) -> list[Feeder]:
     source = next(cells for _, cells in tables.rows("source"))
     place_branches(placed, changed, topology, feeder.kv, source)
     return [_with_branch(feeder, placed, u.node) for u in found]
-
-
-def _sheet(feeder: Feeder, own: Upgrade) -> str:
-    edge = feeder.edges[own.node]
-    return edge.sheet if edge is not None else ""
 
 
 def _with_rows(table: pd.DataFrame, rows: Mapping[int, Row]) -> pd.DataFrame:
