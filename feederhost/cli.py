@@ -208,9 +208,9 @@ def screen(
     Exit code 0: every answer is proven or needs no proof. 4: some answer is not, or has a data
     fault; the result is written all the same. 3: fatal findings outside the requests.
     """
-    from feederhost.study.journal import journal_of
     from feederhost.study.options import Options
-    from feederhost.study.queue_report import screen_report, write_letters
+    from feederhost.study.queue.journal import journal_of
+    from feederhost.study.queue.report import screen_report, write_letters
 
     make = functools.partial(
         Options,
@@ -272,9 +272,11 @@ def _run(
 def _refuse(feeder: Path, output: Path, as_csv: bool) -> None:
     """Refuse, before anything is computed, an output that would spoil the input or cannot be."""
     own, source = output.resolve(), feeder.resolve()
-    if own == source or source in own.parents:
-        raise OutputError(f"the output {output} is in the input itself; name another file")
+    if own == source:
+        raise OutputError(f"the output {output} is the input itself; name another file")
+    if source in own.parents:
+        raise OutputError(f"the output {output} lies in the input folder; name another place")
     if not own.parent.is_dir():
         raise OutputError(f"cannot write {output}: there is no folder {own.parent.name}")
     if not as_csv and output.suffix.lower() != ".xlsx":
-        raise OutputError(f"the output {output} must end in .xlsx (or give --csv for a folder)")
+        raise OutputError(f"cannot write {output}: it must end in .xlsx (--csv writes a folder)")

@@ -11,11 +11,11 @@ from typing import Any
 
 from feederhost.study.cases import study_case
 from feederhost.study.nodal import base_solutions
-from feederhost.study.offers import Remedy
 from feederhost.study.options import Options
-from feederhost.study.queueing import Line, first_stop
-from feederhost.study.remedies import remedies_of
-from feederhost.study.sites import read_sites
+from feederhost.study.queue.offers import Remedy
+from feederhost.study.queue.remedies import remedies_of
+from feederhost.study.queue.sites import read_sites
+from feederhost.study.queue.stops import Line, first_stop
 
 from engine import load, two_bus
 from judge import worst_slack

@@ -17,9 +17,9 @@ from feederhost.feeder.tables import Tables
 from feederhost.study.cases import study_case
 from feederhost.study.nodal import base_solutions
 from feederhost.study.options import Options
-from feederhost.study.queueing import Line
-from feederhost.study.screens import Screen, ScreenData, screen_data, screen_site
-from feederhost.study.sites import read_sites
+from feederhost.study.queue.screens import Screen, ScreenData, screen_data, screen_site
+from feederhost.study.queue.sites import read_sites
+from feederhost.study.queue.stops import Line
 
 import engine
 

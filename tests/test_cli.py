@@ -351,8 +351,12 @@ def test_a_fault_of_the_program_is_called_one(feeder, monkeypatch):
         "this is a fault of the program, not of the feeder:",
         "feederhost: first line second line",
     ]
-    assert isinstance(run("check", feeder, "--debug").exception, RuntimeError)
+    told = run("check", feeder, "--debug")
+    assert told.exit_code == 1
+    assert "RuntimeError: first line" in told.stderr
 
 
-def test_debug_raises_the_error_itself(tmp_path):
-    assert isinstance(run("check", write(tmp_path, UNSOUND), "--debug").exception, InputError)
+def test_debug_shows_the_traceback_and_keeps_the_exit_code(tmp_path):
+    told = run("check", write(tmp_path, UNSOUND), "--debug")
+    assert told.exit_code == InputError.exit_code == 3
+    assert "Traceback" in told.stderr

@@ -6,8 +6,8 @@ import math
 from typing import Any
 
 import pytest
-from feederhost.study.costs import NAMES, Work, priced
-from feederhost.study.offers import Remedy
+from feederhost.study.queue.costs import NAMES, Work, priced
+from feederhost.study.queue.offers import Remedy
 
 from asked import (
     LONG,

@@ -12,8 +12,8 @@ import pytest
 from feederhost.errors import UsageError
 from feederhost.schema import Answer, Criterion, Proof
 from feederhost.study.options import Options
-from feederhost.study.queueing import least_slack
-from feederhost.study.requests import Answered, Bench, answer, judge, set_up
+from feederhost.study.queue.answers import Answered, Bench, answer, judge, set_up
+from feederhost.study.queue.stops import least_slack
 
 from engine import answer as hosted
 from engine import load, row_of

@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 
 import pytest
-from feederhost.study.offers import Remedy
+from feederhost.study.queue.offers import Remedy
 
 from asked import (
     LIBRARY,

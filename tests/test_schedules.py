@@ -9,11 +9,11 @@ from typing import Any
 import pytest
 from feederhost.study.cases import study_case
 from feederhost.study.nodal import base_solutions
-from feederhost.study.offers import Ask, Remedy
 from feederhost.study.options import Options
-from feederhost.study.queueing import Line, Stop
-from feederhost.study.schedules import schedule
-from feederhost.study.sites import read_sites
+from feederhost.study.queue.offers import Ask, Remedy
+from feederhost.study.queue.schedules import schedule
+from feederhost.study.queue.sites import read_sites
+from feederhost.study.queue.stops import Line, Stop
 
 from asked import (
     Tables,

@@ -7,7 +7,7 @@ from dataclasses import fields
 
 import pytest
 from feederhost.settings import Settings
-from feederhost.study.screens import NAMES
+from feederhost.study.queue.screens import NAMES
 
 from screen_feeder import case, line, one, request, screen_bench, screens, small
 

@@ -140,7 +140,7 @@ def test_limits_are_listed_as_comments_at_their_defaults(blank):
         # A limit without a default shows an example, so that the row is whole once uncommented.
         assert value == setting.default if setting.default is not None else value > 0
     assert ("# v_min_pu", 0.95) in rows
-    assert ("# v_min_primary_pu", None) in rows
+    assert ("# v_min_primary_pu", 0.975) in rows
     for cell in blank["limits"]["A"][1:]:
         assert "Source: " in cell.comment.text
 

@@ -10,9 +10,9 @@ import math
 
 import numpy as np
 import pytest
-from feederhost.study import voltage_screens
-from feederhost.study.queueing import first_stop
-from feederhost.study.voltage_screens import CHANGES
+from feederhost.study.queue import voltage_screens
+from feederhost.study.queue.stops import first_stop
+from feederhost.study.queue.voltage_screens import CHANGES
 
 from screen_feeder import case, line, request, screen_bench, screens, small
 

@@ -11,7 +11,7 @@ from feederhost.feeder.model import EXPORT
 from feederhost.schema import Proof
 from feederhost.study.cases import BOTH, CaseStudy
 from feederhost.study.nodal import rounded_down
-from feederhost.study.offers import (
+from feederhost.study.queue.offers import (
     Ask,
     Remedy,
     Trial,
@@ -22,8 +22,8 @@ from feederhost.study.offers import (
     stop_in_case,
     written,
 )
-from feederhost.study.queueing import least_slack
-from feederhost.study.sites import draw_of, power_of
+from feederhost.study.queue.sites import draw_of, power_of
+from feederhost.study.queue.stops import least_slack
 
 SCHEDULE = "schedule"
 MONTHS, HOURS = range(1, 13), range(24)

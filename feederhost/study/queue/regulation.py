@@ -17,7 +17,7 @@ from feederhost.feeder.model import Feeder
 from feederhost.flow.taps import Regulator
 from feederhost.flow.tree import path
 from feederhost.schema import Criterion, Proof
-from feederhost.study.offers import (
+from feederhost.study.queue.offers import (
     Ask,
     Remedy,
     Trial,

@@ -22,7 +22,7 @@ from feederhost.flow.tree import Complexes, Floats
 from feederhost.schema import LIMIT_CRITERIA, Criterion
 from feederhost.settings import Settings
 from feederhost.study.cases import BOTH, CaseStudy, Posed, change_limits, join_limits
-from feederhost.study.sites import Site, ceiling_of, draw_of, power_of, reserved_power
+from feederhost.study.queue.sites import Site, ceiling_of, draw_of, power_of, reserved_power
 
 _CHANGE = LIMIT_CRITERIA.index(Criterion.VOLTAGE_CHANGE)
 

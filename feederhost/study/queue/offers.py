@@ -23,8 +23,8 @@ from feederhost.flow.taps import Solved
 from feederhost.schema import LIMIT_CRITERIA, Criterion
 from feederhost.study.cases import CaseStudy, base_run, steady_limits, study_case
 from feederhost.study.nodal import rounded_down
-from feederhost.study.queueing import Line, Stop, first_stop, least_slack, with_queue
-from feederhost.study.sites import Site, draw_of, reserved_power
+from feederhost.study.queue.sites import Site, draw_of, reserved_power
+from feederhost.study.queue.stops import Line, Stop, first_stop, least_slack, with_queue
 
 # Poses a case, by its number, for a direction.
 Studies = Callable[[int, str], CaseStudy]

@@ -13,16 +13,16 @@ import numpy as np
 
 from feederhost.feeder.model import EXPORT, IMPORT
 from feederhost.flow.tree import Floats, path
-from feederhost.study.screen_data import ScreenData, screen_data
-from feederhost.study.screening import SOURCES, Screen, Trial, at_most, below, trial
-from feederhost.study.service_screens import (
+from feederhost.study.queue.screen_data import ScreenData, screen_data
+from feederhost.study.queue.screening import SOURCES, Screen, Trial, at_most, below, trial
+from feederhost.study.queue.service_screens import (
     LISTED,
     centre_tap,
     line_type,
     listed,
     shared_secondary,
 )
-from feederhost.study.voltage_screens import (
+from feederhost.study.queue.voltage_screens import (
     CHANGES,
     EXPORT_CONTROL,
     export_control,

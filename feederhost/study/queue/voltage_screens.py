@@ -16,9 +16,9 @@ from feederhost.flow.network import behind_loading
 from feederhost.flow.sweep import sweep
 from feederhost.flow.tree import Complexes, Floats
 from feederhost.study.cases import BOTH, CaseStudy
-from feederhost.study.queueing import least_slack
-from feederhost.study.screening import SOURCES, Screen, Trial, at_most
-from feederhost.study.sites import power_of
+from feederhost.study.queue.screening import SOURCES, Screen, Trial, at_most
+from feederhost.study.queue.sites import power_of
+from feederhost.study.queue.stops import least_slack
 
 ALONE, TOGETHER = CHANGES = ("voltage change", "voltage change of all generation")
 EXPORT_CONTROL = "export control fails"

@@ -8,7 +8,7 @@ from collections.abc import Sequence
 
 from feederhost.schema import Answer, Proof
 from feederhost.study.load import Loaded
-from feederhost.study.queue_tables import Page
+from feederhost.study.queue.sheets import Page
 from feederhost.study.summary import NOT_COVERED, cautions
 
 HEADING = "Draft for the engineer's review - not a determination"

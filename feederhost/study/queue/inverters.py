@@ -14,7 +14,7 @@ from feederhost.flow.sweep import sweep
 from feederhost.schema import Proof
 from feederhost.study.cases import BOTH, CaseStudy
 from feederhost.study.nodal import rounded_down
-from feederhost.study.offers import (
+from feederhost.study.queue.offers import (
     Ask,
     Remedy,
     Trial,
@@ -27,7 +27,7 @@ from feederhost.study.offers import (
     whole_line,
     written,
 )
-from feederhost.study.sites import Part, Site, ceiling_of, draw_of, power_of, reserved_power
+from feederhost.study.queue.sites import Part, Site, ceiling_of, draw_of, power_of, reserved_power
 
 FIXED_POWER_FACTOR = "fixed_power_factor"
 # What stops a size that the inverter itself cannot carry: the column that says so.

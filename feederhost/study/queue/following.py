@@ -13,10 +13,10 @@ from feederhost.flow.limits import measure, slack
 from feederhost.flow.tree import Complexes, Floats
 from feederhost.schema import LIMIT_CRITERIA, Criterion
 from feederhost.study.cases import BOTH, CaseStudy, Posed
-from feederhost.study.inverters import exports
-from feederhost.study.offers import Ask
-from feederhost.study.queueing import with_queue
-from feederhost.study.sites import Part, draw_of, reserved_power
+from feederhost.study.queue.inverters import exports
+from feederhost.study.queue.offers import Ask
+from feederhost.study.queue.sites import Part, draw_of, reserved_power
+from feederhost.study.queue.stops import with_queue
 
 
 @dataclass(frozen=True, eq=False)

@@ -12,14 +12,14 @@ from dataclasses import replace
 
 from feederhost.feeder.tables import Tables
 from feederhost.schema import Proof
-from feederhost.study.controls import controls
-from feederhost.study.costs import priced
-from feederhost.study.inverters import fixed_power_factor
-from feederhost.study.offers import Ask, Remedy, offered, passes, remedy, written
-from feederhost.study.queueing import Line, Stop
-from feederhost.study.regulation import regulator_setting
-from feederhost.study.schedules import schedule
-from feederhost.study.upgrades import upgrade
+from feederhost.study.queue.controls import controls
+from feederhost.study.queue.costs import priced
+from feederhost.study.queue.inverters import fixed_power_factor
+from feederhost.study.queue.offers import Ask, Remedy, offered, passes, remedy, written
+from feederhost.study.queue.regulation import regulator_setting
+from feederhost.study.queue.schedules import schedule
+from feederhost.study.queue.stops import Line, Stop
+from feederhost.study.queue.upgrades import upgrade
 
 __all__ = ["SMALLER_SIZE", "Remedy", "remedies_of"]
 

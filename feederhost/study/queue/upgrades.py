@@ -21,9 +21,9 @@ from feederhost.feeder.tables import Tables
 from feederhost.feeder.topology import Topology
 from feederhost.flow.tree import Floats
 from feederhost.schema import Criterion, Proof
-from feederhost.study.costs import Work, priced
 from feederhost.study.nodal import rounded_down
-from feederhost.study.offers import (
+from feederhost.study.queue.costs import Work, priced
+from feederhost.study.queue.offers import (
     Ask,
     Remedy,
     Trial,
@@ -36,10 +36,10 @@ from feederhost.study.offers import (
     restudied,
     whole_line,
 )
-from feederhost.study.queueing import Line
-from feederhost.study.regulation import nodes_between
-from feederhost.study.screen_data import ScreenData, screen_data
-from feederhost.study.screening import trial
+from feederhost.study.queue.regulation import nodes_between
+from feederhost.study.queue.screen_data import ScreenData, screen_data
+from feederhost.study.queue.screening import trial
+from feederhost.study.queue.stops import Line
 
 CONDUCTOR, TRANSFORMER = "larger_conductor", "larger_transformer"
 _VOLTAGE = (Criterion.VOLTAGE_HIGH, Criterion.VOLTAGE_LOW, Criterion.VOLTAGE_CHANGE)

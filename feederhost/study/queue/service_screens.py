@@ -6,7 +6,7 @@ unknown is read both ways, and the verdict stands only if it is the same.
 
 from __future__ import annotations
 
-from feederhost.study.screening import SOURCES, Screen, Trial, at_most
+from feederhost.study.queue.screening import SOURCES, Screen, Trial, at_most
 
 _THREE = 3
 _RULE = SOURCES["screen_secondary_kw"]

@@ -15,7 +15,7 @@ from typing import Any
 
 from feederhost.feeder.tables import Tables
 from feederhost.schema import LENGTH, UNIT_FACTORS
-from feederhost.study.offers import Remedy, joined
+from feederhost.study.queue.offers import Remedy, joined
 
 NAMES = {
     "fixed_power_factor": ("fixed power factor", "power factor"),

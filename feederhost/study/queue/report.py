@@ -10,11 +10,12 @@ from pathlib import Path
 from feederhost.errors import OutputError
 from feederhost.sheets.atomic import atomic_write
 from feederhost.study.base import base_cases_table
-from feederhost.study.journal import Journal, finished, heading
-from feederhost.study.letters import letters
 from feederhost.study.load import load_feeder
 from feederhost.study.options import Options
-from feederhost.study.queue_tables import (
+from feederhost.study.queue.answers import Answered, Bench, answer, set_up, settled, taken_up
+from feederhost.study.queue.journal import Journal, finished, heading
+from feederhost.study.queue.letters import letters
+from feederhost.study.queue.sheets import (
     Page,
     lay_out,
     queue_sheets,
@@ -28,7 +29,6 @@ from feederhost.study.reports import (
     Report,
     feeder_heading,
 )
-from feederhost.study.requests import Answered, Bench, answer, set_up, settled, taken_up
 from feederhost.study.results import audit_table
 from feederhost.study.summary import flags_for_all, run_table, timing_table
 

@@ -13,12 +13,12 @@ from feederhost.schema import BASES, Answer, Criterion, Proof
 from feederhost.study.cases import case_scale
 from feederhost.study.load import Loaded
 from feederhost.study.options import Options
-from feederhost.study.queueing import Line
-from feederhost.study.remedies import Remedy
-from feederhost.study.requests import Answered, open_screens
+from feederhost.study.queue.answers import Answered, open_screens
+from feederhost.study.queue.remedies import Remedy
+from feederhost.study.queue.screens import Screen
+from feederhost.study.queue.sites import Site
+from feederhost.study.queue.stops import Line
 from feederhost.study.results import at_limit, in_kw, result_frame
-from feederhost.study.screens import Screen
-from feederhost.study.sites import Site
 from feederhost.study.summary import cautions, unlimited
 
 

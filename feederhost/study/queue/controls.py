@@ -15,10 +15,10 @@ from feederhost.feeder.model import EXPORT
 from feederhost.flow.curves import CATEGORY_B, VOLT_WATT, VOLT_WATT_STORAGE, Curve
 from feederhost.schema import Proof
 from feederhost.study.cases import BOTH
-from feederhost.study.following import Control, Room, Run, at_hand, room_of, runs_of
-from feederhost.study.inverters import INVERTER
 from feederhost.study.nodal import rounded_down
-from feederhost.study.offers import Ask, Remedy, joined, offered, remedy, written
+from feederhost.study.queue.following import Control, Room, Run, at_hand, room_of, runs_of
+from feederhost.study.queue.inverters import INVERTER
+from feederhost.study.queue.offers import Ask, Remedy, joined, offered, remedy, written
 
 _HUNTS = "the inverter hunts on this curve here: not offered"
 

@@ -12,8 +12,8 @@ from feederhost.feeder.model import IMPORT, Feeder
 from feederhost.flow.shortcircuit import infeed
 from feederhost.flow.tree import Floats, subtree_sum
 from feederhost.settings import Settings
-from feederhost.study.screen_data import ScreenData
-from feederhost.study.sites import Site
+from feederhost.study.queue.screen_data import ScreenData
+from feederhost.study.queue.sites import Site
 
 PASS, FAIL, OPEN = "pass", "fail", "not assessed"
 SOURCES = {f.name: str(f.metadata["source"]) for f in fields(Settings)}

@@ -24,10 +24,10 @@ from feederhost.study.load import Loaded
 from feederhost.study.nodal import base_solutions, rounded_down
 from feederhost.study.options import Options
 from feederhost.study.proving import Prover
-from feederhost.study.queueing import Line, Stop, first_stop, head_room, least_slack
-from feederhost.study.remedies import Remedy, remedies_of
-from feederhost.study.screens import Screen, ScreenData, screen_data, screen_site
-from feederhost.study.sites import Site, draw_of, read_sites
+from feederhost.study.queue.remedies import Remedy, remedies_of
+from feederhost.study.queue.screens import Screen, ScreenData, screen_data, screen_site
+from feederhost.study.queue.sites import Site, draw_of, read_sites
+from feederhost.study.queue.stops import Line, Stop, first_stop, head_room, least_slack
 
 FITTING, ASKED, NONE = "fitting", "asked", "none"
 RESERVES = (FITTING, ASKED, NONE)

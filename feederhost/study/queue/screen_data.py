@@ -21,9 +21,9 @@ from feederhost.flow.tree import Complexes, Floats, subtree_sum
 from feederhost.schema import BUILT_IN_CASES, BUILT_IN_TECHNOLOGIES
 from feederhost.settings import Settings
 from feederhost.study.cases import case_scale, plant_draw
-from feederhost.study.queueing import Line
-from feederhost.study.services import Serving, serving
-from feederhost.study.sites import Site, ceiling_of, draw_of
+from feederhost.study.queue.services import Serving, serving
+from feederhost.study.queue.sites import Site, ceiling_of, draw_of
+from feederhost.study.queue.stops import Line
 
 _BUILT_IN = {str(t["technology"]): t for t in BUILT_IN_TECHNOLOGIES}
 

@@ -1,0 +1,1 @@
+"""The request queue: sites, what fits, rule screens, remedies, letters."""
