@@ -123,7 +123,7 @@ class Settings:
     sweep_tolerance: float = _setting(
         1e-12, "pu", "voltage step at which a sweep has settled", _METHOD
     )
-    sweep_limit: int = _setting(500, "-", "most sweeps before 'no solution'", _METHOD)
+    sweep_limit: int = _setting(3000, "-", "most sweeps before 'no solution'", _METHOD)
     sweep_review: int = _setting(
         20, "-", "sweeps after which a column's rate of settling is judged", _METHOD
     )
@@ -163,8 +163,8 @@ class Settings:
     )
     swing_rounds: int = _setting(12, "-", "most rounds of locating a swing", _METHOD)
     search_lost_share: float = _setting(
-        0.01, "-", "how closely the loss of a solution is located once a limit has been met, "
-        "as a share of the cap", _METHOD,
+        0.001, "-", "how closely the loss of a solution is located once a limit has been met",
+        _METHOD,
     )  # fmt: skip
     search_overshoot: float = _setting(
         1.2, "-", "how far a step reaches past the nearest tangent zero", _METHOD

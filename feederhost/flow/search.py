@@ -196,7 +196,8 @@ def _search_block(
         # Where the solution is lost matters to the last digit only if nothing came before it.
         first = np.isinf(rating[:, pick]).all(axis=0)
         close = np.where(first, settings.search_tolerance, settings.search_lost_share)
-        gone = np.flatnonzero(ceiling[live] - g[live] <= close * cap[live])
+        known = np.isfinite(ceiling[live])
+        gone = np.flatnonzero(known & (ceiling[live] - g[live] <= close * ceiling[live]))
         rating[NO_SOLUTION, pick[gone]] = g[live[gone]]
         for c in present:
             hit = crossed[group == c].any(axis=0)

@@ -272,6 +272,8 @@ INPUT: dict[str, Sheet] = {
                 Column("window_from", "first hour it runs", unit="h", lowest=0, highest=23),
                 Column("window_to", "last hour it runs", unit="h", lowest=0, highest=24),
                 Column("fault_current_pu", "fault current over rated current", unit="pu", lowest=0),
+                _pick("machine", "kind of plant, for its fault current where that is blank",
+                      ("inverter", "rotating"), "inverter"),
             ),
         ),
         Sheet(

@@ -207,6 +207,7 @@ RESULT: dict[str, Output] = {
                 ("unit", "unit of both"),
                 ("verdict", "pass, fail or not assessed"),
                 ("missing", "what is missing where it is not assessed"),
+                ("detail", "where, in which case, percent of what"),
                 ("source", "where the rule stands"),
             ),
         ),

@@ -5,14 +5,14 @@ from __future__ import annotations
 from dataclasses import dataclass
 from pathlib import Path
 
-from feederhost.errors import Finding, InputError, fatal
+from feederhost.errors import Finding, InputError, Severity, fatal
 from feederhost.feeder.audit import audit
 from feederhost.feeder.branches import reversed_regulators
 from feederhost.feeder.model import Feeder
 from feederhost.feeder.perunit import build_feeder
 from feederhost.feeder.phases import unbalanced_phases
 from feederhost.feeder.tables import Tables, check_tables, in_order
-from feederhost.feeder.topology import root_feeder
+from feederhost.feeder.topology import Topology, root_feeder
 from feederhost.sheets.reading import read_workbook
 
 
@@ -35,6 +35,18 @@ class Loaded:
         )
 
 
+def _at_source(tables: Tables, topology: Topology) -> list[Finding]:
+    """Find candidates at the source node: nothing is judged there."""
+    return [
+        tables.finding(
+            Severity.FATAL, "candidates", row, "node", "this is the source node itself",
+            "name a node of the feeder",
+        )
+        for row, cells in tables.rows("candidates")
+        if cells["node"] == topology.nodes[0]
+    ]  # fmt: skip
+
+
 def load_feeder(path: Path) -> Loaded:
     """Read a workbook or csv folder.
 
@@ -51,6 +63,7 @@ def load_feeder(path: Path) -> Loaded:
         findings += audit(tables, topology)
         findings += reversed_regulators(tables, topology)
         findings += unbalanced_phases(tables)
+        findings += _at_source(tables, topology)
     findings = list(in_order(findings))
     stopping = fatal(findings)
     if stopping or topology is None:

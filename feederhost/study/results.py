@@ -14,7 +14,7 @@ from feederhost.feeder.model import Feeder
 from feederhost.flow.limits import Quantity
 from feederhost.flow.search import WATCHED
 from feederhost.schema import BASES, LIMIT_CRITERIA, RESULT, Criterion, Proof, State
-from feederhost.study.cases import Posed, case_scale
+from feederhost.study.cases import BOTH, Posed, case_scale
 from feederhost.study.rows import Hosting, HostingRow, element_name
 
 _HOSTED = (State.HOSTED, State.HOSTED_BASE_VIOLATION)
@@ -151,7 +151,8 @@ def _row_flags(hosting: Hosting, row: HostingRow) -> list[str]:
         flags.append("bank may be shared with other feeders")
     if row.criterion is Criterion.AC_CHECK and row.proof is not Proof.FAILED:
         flags.append("power flow solution is lost before any limit is met")
-    if feeder.technology(row.candidate.technology).direction == "both":
+    both = feeder.technology(row.candidate.technology).direction == BOTH
+    if both and row.state is not State.NOT_ANALYSED:
         flags.append(f"binding direction: {row.direction}")
     return flags
 

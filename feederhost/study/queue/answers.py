@@ -237,8 +237,9 @@ def _depends_on(
         more = np.full(len(removed), min(judged.fits + step, site.asked))
         changed |= least_slack(line, at, more, removed) >= 0
     if judged.answer is Answer.FITS_SCREENS_OPEN and _only_failed(judged.screens):
+        failed = tuple(s.screen for s in open_screens(judged.screens))
         for i, others in enumerate(removed):
-            again = screen_site(bench.data, at, others, site.asked)
+            again = screen_site(bench.data, at, others, site.asked, failed)
             changed[i] |= not open_screens(again)
     return tuple(line.sites[i].request for i, c in zip(sizes, changed, strict=True) if c)
 

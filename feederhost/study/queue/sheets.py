@@ -128,7 +128,7 @@ def screen_row(own: Screen) -> dict[str, object]:
     return {
         "request": own.request, "screen": own.screen, "quantity": _number(own.quantity),
         "threshold": _number(own.threshold), "unit": own.unit, "verdict": own.verdict,
-        "missing": own.missing, "source": own.source,
+        "missing": own.missing, "detail": own.detail, "source": own.source,
     }  # fmt: skip
 
 
