@@ -15,6 +15,7 @@ MOST_BARS = 60  # more names than this cannot be read along one axis
 PROVEN, CAPPED, UNPROVEN = "proven", "capped: at least", "bracketed or ac_only"
 _PROOFS: dict[str, str] = {Proof.PROVEN: PROVEN, Proof.NOT_NEEDED: CAPPED,
            Proof.BRACKETED: UNPROVEN, Proof.AC_ONLY: UNPROVEN}  # fmt: skip
+RESERVED, ROOM = "reserved", "head room at the node"
 BASE, HOSTING, PLANT = "base", "plant at its hosting", "plant node"
 LOWER, UPPER = "v_min_pu", "v_max_pu"
 
@@ -32,6 +33,8 @@ class Block:
     subtitle: str
     headers: tuple[str, ...]
     columns: tuple[tuple[Cell, ...], ...]
+    axis: str = "node (phases), by distance from the source"
+    measure: str = "hosting, kW"
 
     @property
     def is_profile(self) -> bool:
@@ -40,7 +43,7 @@ class Block:
 
 
 def chart_blocks(tables: Mapping[str, Table]) -> tuple[Block, ...]:
-    """Return a block per chart: hosting per technology, then the profiles; none without data."""
+    """Return a block per chart: hosting per technology, profiles, queue; none without data."""
     blocks: list[Block] = []
     hosting, profile = tables.get("hosting"), tables.get("profile")
     if hosting:
@@ -50,7 +53,26 @@ def chart_blocks(tables: Mapping[str, Table]) -> tuple[Block, ...]:
         by_plant = _groups(profile, ("technology", "plant_node", "case"))
         for (technology, plant_node, case), rows in by_plant.items():
             blocks += _profile_block(profile, technology, plant_node, case, rows)
+    if tables.get("queue"):
+        blocks += _queue_block(tables["queue"])
     return tuple(blocks)
+
+
+def _queue_block(table: Table) -> list[Block]:
+    """Show what each request holds and leaves, in order; the first ones of a long queue."""
+    names = table.column("request")
+    count = min(len(names), MOST_BARS)
+    if not count:
+        return []
+    remark = f"the first {MOST_BARS} of {len(names):,} requests" if len(names) > count else ""
+    columns = (names, table.column("reserved_kw"), table.column("head_room_kw"))
+    return [
+        Block(
+            "Queue: reserved, and what would still fit at its node", remark,
+            ("request", RESERVED, ROOM), tuple(tuple(c[:count]) for c in columns),
+            "request, in order of the queue", "kW",
+        )
+    ]  # fmt: skip
 
 
 def data_rows(blocks: Sequence[Block]) -> Iterator[list[Cell]]:

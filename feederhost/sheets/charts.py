@@ -38,6 +38,8 @@ from feederhost.sheets.chart_data import (
     LOWER,
     PLANT,
     PROVEN,
+    RESERVED,
+    ROOM,
     UNPROVEN,
     UPPER,
     Block,
@@ -57,7 +59,10 @@ _TITLE, _SMALL, _AXIS = 1300, 1000, 900  # hundredths of a point
 _MANY_POINTS = 300  # above this, points are drawn smaller
 _PU_STEP = 0.01  # the voltage axis starts and ends on a multiple of this
 # Fill, and hatching over it.
-_BARS = {PROVEN: (_DARK, ""), CAPPED: (_PALE, ""), UNPROVEN: (_DARK, "wdUpDiag")}
+_BARS = {
+    PROVEN: (_DARK, ""), CAPPED: (_PALE, ""), UNPROVEN: (_DARK, "wdUpDiag"),
+    RESERVED: (_DARK, ""), ROOM: (_PALE, ""),
+}  # fmt: skip
 # Marker, its size, fill, outline.
 _POINTS = {
     BASE: ("circle", 6, _MIDDLE, _DARK),
@@ -93,7 +98,7 @@ def place_charts(sheet: WriteOnlyWorksheet, blocks: Sequence[Block]) -> None:
 def _hosting_chart(block: Block, first: int) -> BarChart:
     chart = BarChart()
     chart.type, chart.grouping, chart.overlap, chart.gapWidth = "col", "stacked", 100, 40
-    _dress(chart, block, "node (phases), by distance from the source", "hosting, kW")
+    _dress(chart, block, block.axis, block.measure)
     chart.y_axis.number_format, chart.y_axis.scaling.min = "#,##0", 0
     chart.x_axis.tickLblSkip, chart.x_axis.noMultiLvlLbl = 1, True
     upright = len(block.columns[0]) > 12 or max(len(str(n)) for n in block.columns[0]) > 8

@@ -129,10 +129,11 @@ class Prover:
             for i in range(rating.size)
         ]  # fmt: skip
 
-    def settle(self, own: Evidence, *, plain: bool = False) -> Verdict:
+    def settle(self, own: Evidence, *, plain: bool = False, bound: bool = True) -> Verdict:
         """Hold the recursion against the conic solver and settle the proof.
 
-        With ``plain`` the plain programme is solved too, for the record.
+        With ``plain`` the plain programme is solved too, for the record; without ``bound`` a
+        row that is not proven gets no upper bound (NaN).
         """
         settings, cap = self.settings, float(own.plant.cap[0])
         programme = self.programme(own.system)
@@ -160,6 +161,8 @@ class Prover:
         closes = bool(own.certificate.closes[own.column])
         if relaxed is not None and closes and self._agrees(relaxed, own):
             return Verdict(Proof.PROVEN, own.rating, solved)
+        if not bound:
+            return Verdict(Proof.BRACKETED, math.nan, solved)
         upper = upper_bound(
             self.programme(own.system, cuts=True), own.system, own.flow, own.seek, own.column,
             own.rating, cap, self.solver, settings,

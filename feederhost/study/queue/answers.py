@@ -24,7 +24,7 @@ from feederhost.study.load import Loaded
 from feederhost.study.nodal import base_solutions, rounded_down
 from feederhost.study.options import Options
 from feederhost.study.proving import Prover
-from feederhost.study.queue.remedies import Remedy, remedies_of
+from feederhost.study.queue.remedies import SMALLER_SIZE, Remedy, remedies_of
 from feederhost.study.queue.screens import Screen, ScreenData, screen_data, screen_site
 from feederhost.study.queue.sites import Site, draw_of, read_sites
 from feederhost.study.queue.stops import Line, Stop, first_stop, head_room, least_slack
@@ -57,7 +57,6 @@ class Answered:
     fits: float = math.nan
     stop: Stop | None = None
     value: float = math.nan
-    upper: float = math.nan
     reserved: float = 0.0
     reach: float = math.nan
     depends_on: tuple[str, ...] = ()
@@ -130,7 +129,7 @@ def answer(bench: Bench, at: int, before: Sequence[Answered]) -> Answered:
         judged = replace(judged, answer=Answer.FITS_SCREENS_OPEN)
     if bench.options.remedies and judged.stop is not None and _short(judged):
         offered = tuple(
-            replace(r, proof=str(judged.proof)) if r.remedy == "smaller_size" else r
+            replace(r, proof=str(judged.proof)) if r.remedy == SMALLER_SIZE else r
             for r in remedies_of(line, bench.loaded.tables, at, sizes, judged.stop)
         )
         judged = replace(judged, remedies=offered)
@@ -169,7 +168,7 @@ def judge(line: Line, prover: Prover, at: int, sizes: Mapping[int, float]) -> An
     # A request that finds a limit broken by the queue before it starts fits at nothing.
     holds = slack[0] >= -settings.rounding_slack or fits == 0
     if not holds or (not whole and slack[1] >= 0):
-        return replace(answered, proof=Proof.FAILED, fits=math.nan, upper=math.nan)
+        return replace(answered, proof=Proof.FAILED, fits=math.nan)
     return answered
 
 
@@ -188,8 +187,9 @@ def _proven(line: Line, prover: Prover, answered: Answered) -> Answered:
     )
     rating, limit = np.array([stop.rating]), np.array([stop.limit])
     (own,) = prover.certify(stop.posed.system, plants, rating, limit)
-    verdict = prover.settle(own)
-    return replace(answered, proof=verdict.proof, upper=verdict.upper, value=own.value)
+    # No sheet of the queue shows an upper bound.
+    verdict = prover.settle(own, bound=False)
+    return replace(answered, proof=verdict.proof, value=own.value)
 
 
 def open_screens(screens: tuple[Screen, ...]) -> tuple[Screen, ...]:
@@ -205,7 +205,7 @@ def _carries(remedy: Remedy, site: Site, feeder: Feeder) -> bool:
     """Whether a remedy other than a smaller size carries what is asked."""
     asked = feeder.kw(site.asked)
     whole = asked * (1 - feeder.settings.search_tolerance)
-    return remedy.remedy != "smaller_size" and remedy.kw >= whole
+    return remedy.remedy != SMALLER_SIZE and remedy.kw >= whole
 
 
 def _reserved(judged: Answered, reserve: str) -> float:

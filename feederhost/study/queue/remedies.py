@@ -41,7 +41,7 @@ def remedies_of(
     sizes : mapping of int to float
         Sizes of the other sites, per unit.
     stop : Stop
-        What the request meets first (see :func:`study.queueing.first_stop`).
+        What the request meets first (see :func:`study.queue.stops.first_stop`).
 
     Returns
     -------

@@ -14,7 +14,7 @@ from feederhost.study.cases import case_scale
 from feederhost.study.load import Loaded
 from feederhost.study.options import Options
 from feederhost.study.queue.answers import Answered, open_screens
-from feederhost.study.queue.remedies import Remedy
+from feederhost.study.queue.remedies import SMALLER_SIZE, Remedy
 from feederhost.study.queue.screens import Screen
 from feederhost.study.queue.sites import Site
 from feederhost.study.queue.stops import Line
@@ -108,7 +108,7 @@ def _stop(feeder: Feeder, own: Answered) -> dict[str, object]:
 
 def best_remedy(own: Answered) -> Remedy | None:
     """Return the first remedy that carries most, a smaller size aside."""
-    offered = [r for r in own.remedies if not math.isnan(r.kw) and r.remedy != "smaller_size"]
+    offered = [r for r in own.remedies if not math.isnan(r.kw) and r.remedy != SMALLER_SIZE]
     return max(offered, key=lambda r: r.kw, default=None)
 
 

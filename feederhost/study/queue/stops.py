@@ -265,6 +265,33 @@ def _room(feeder: Feeder, frame: _Frame, a: OperatingPoint, b: OperatingPoint) -
     return np.where(a.solved & b.solved, room, -np.inf)
 
 
+@dataclass(frozen=True)
+class _Queues:
+    """Queues side by side: every site and size that occurs, and in which of m queues it does."""
+
+    members: tuple[tuple[int, float], ...]
+    present: np.ndarray
+
+    @classmethod
+    def of(cls, sizes: Sequence[Mapping[int, float]]) -> _Queues:
+        """Collect what the queues have in common, so that it is worked out once."""
+        members = tuple(dict.fromkeys(pair for s in sizes for pair in s.items()))
+        number = {pair: i for i, pair in enumerate(members)}
+        present = np.zeros((len(members), len(sizes)), dtype=bool)
+        for column, own in enumerate(sizes):
+            present[[number[pair] for pair in own.items()], column] = True
+        return cls(members, present)
+
+    def power(self, line: Line, study: CaseStudy, way: str) -> Complexes:
+        """Power the queues draw in a case, (n, phases, m)."""
+        feeder, phases = line.feeder, line.feeder.network.phases
+        drawn = np.zeros((feeder.tree.size, phases, self.present.shape[1]), dtype=complex)
+        for (at, size), where in zip(self.members, self.present, strict=True):
+            site = line.sites[at]
+            drawn[site.node] += power_of(site, size, study.case, way) / phases * where
+        return drawn
+
+
 def least_slack(
     line: Line,
     at: int,
@@ -288,15 +315,14 @@ def least_slack(
         Minus infinity where a case has no solution.
     """
     site, feeder = line.sites[at], line.feeder
+    queue = _Queues.of(sizes)
     least = np.full(size.size, np.inf)
     changes = bool(np.isfinite(feeder.change).any())
     for way in site.ways:
         for study in line.studies[way]:
             if draw_of(site, study.case, way) == 0:
                 continue
-            others = np.concatenate(
-                [reserved_power(feeder, s, line.sites, study.case, way) for s in sizes], axis=2
-            )
+            others = queue.power(line, study, way)
             own = np.array([power_of(site, g, study.case, way, limited=limited) for g in size])
             least = np.minimum(least, _steady_slack(line, site, study, others, own))
             if not changes:
