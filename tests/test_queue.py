@@ -311,6 +311,13 @@ def test_a_dirty_queue_is_answered_row_by_row():
     assert by_name["Q8"].site.flags == ("may stand in generators already (row 2)",)
 
 
+def test_a_request_on_one_phase_is_not_judged_as_if_it_had_three():
+    _, (one, three) = run(feeder(ask("Q1", "A", 10, phases="B"), ask("Q2", "A", 10, phases="CAB")))
+    assert one.answer is Answer.DATA_FAULT
+    assert "on phase B alone" in one.site.fault
+    assert three.answer is not Answer.DATA_FAULT
+
+
 def test_a_queue_without_requests_is_refused():
     with pytest.raises(UsageError, match="no open request"):
         run(feeder(ask("Q1", "A", 10, status="withdrawn")))

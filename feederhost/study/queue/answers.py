@@ -117,6 +117,10 @@ def answer(bench: Bench, at: int, before: Sequence[Answered]) -> Answered:
             a.site.request for a in before
             if a.answer in (Answer.DOES_NOT_FIT, Answer.DATA_FAULT)
         )  # fmt: skip
+    if not site.fault and site.phases not in ("", "ABC"):
+        # Judged as three-phase it would seem to fit several times better than it does.
+        told = f"on phase {site.phases} alone, and this feeder is judged balanced"
+        site = replace(site, fault=told)
     if site.fault:
         return Answered(site, Answer.DATA_FAULT, provisional_on=provisional)
     sizes = {i: a.reserved for i, a in enumerate(before) if a.reserved > 0}
