@@ -1,14 +1,16 @@
 """Cooper Quay 5: a short urban cable feeder, where ratings decide.
 
-12.47 kV underground, four thousand feet of 500 kcmil aluminium and two spurs in smaller cable,
-ten pad-mounted transformers to 480 V with offices, flats and shops behind them; line charging,
-a bank shared with other feeders, and a head that may export 3 MW at most.  Four cases: a
-winter evening, a summer working day at noon, a Sunday noon in May, and a night of charging.
+12.47 kV underground, four thousand feet of 500 kcmil aluminium and two spurs in smaller
+cable, ten pad-mounted transformers to 480 V with offices, flats and shops behind them; line
+charging, a bank shared with other feeders, and a head that may export 3 MW at most. Four
+cases: a winter evening, a summer working day at noon, a Sunday noon in May, and a night of
+charging.
 
-What to look at: voltages are comfortable throughout, so no answer is a voltage.  At 480 V the
-transformer decides, at K7P the service cable.  On the cables PV is stopped by the export limit of the head, on the old
-spur to K10 by the cable; EV charging by the bank, and beyond the thicker cables by the thinner
-ones.  Charging of the cables is in the model.  The tie K6-K10 is open.
+What to look at: voltages are comfortable throughout, so no answer is a voltage. At 480 V the
+transformer decides, at K7P the service cable. On the cables PV is stopped by the export limit
+of the head, on the old spur to K10 by the cable; EV charging by the bank, and beyond the
+thicker cables by the thinner ones. Charging of the cables is in the model. The tie K6-K10 is
+open.
 """
 
 from __future__ import annotations

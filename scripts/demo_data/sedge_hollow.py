@@ -1,16 +1,16 @@
 """Sedge Hollow 2: a long overhead rural feeder, where voltage decides.
 
-12.47 kV, eleven miles of trunk in 336, 4/0 and 1/0 ACSR with eight laterals: homes, farms, irrigation
-pumps, a school, a dairy and a mill; two capacitors, an in-line voltage regulator five miles
-out, a solar garden and smaller plants already there, six requests waiting and one withdrawn.
-Four cases: a winter evening, a July noon, an April noon with the least load of the daytime, and a night of
-charging.
+12.47 kV, eleven miles of trunk in 336, 4/0 and 1/0 ACSR with eight laterals: homes, farms,
+irrigation pumps, a school, a dairy and a mill; two capacitors, an in-line voltage regulator
+five miles out, a solar garden and smaller plants already there, six requests waiting and one
+withdrawn. Four cases: a winter evening, a July noon, an April noon with the least load of the
+daytime, and a night of charging.
 
-What to look at: the regulator raises the far half by four steps on the winter evening and stands
-at neutral on the April noon.  PV is stopped by high voltage nearly everywhere: at the
-regulator's own terminal, along the far trunk or at the end of a thin lateral; EV charging by low voltage at the far
-end in winter, or by the change of voltage at night; the bank decides next to the station, the
-service transformer behind one.  The open tie C3-E4 stays open.
+What to look at: the regulator raises the far half by four steps on the winter evening and
+stands at neutral on the April noon. PV is stopped by high voltage nearly everywhere: at the
+regulator's own terminal, along the far trunk or at the end of a thin lateral; EV charging by
+low voltage at the far end in winter, or by the change of voltage at night; the bank decides
+next to the station, the service transformer behind one. The open tie C3-E4 stays open.
 """
 
 from __future__ import annotations
