@@ -101,9 +101,9 @@ def line_constants(cells: Row, library: dict[str, Row], hertz: float) -> tuple[c
         explicit = cells[f"{letter}1_ohm"]
         per_length = per_km(f"{letter}1_ohm_per_km", letter, "ohm_per_km") * length
         total[letter] = per_length if math.isnan(explicit) else explicit
-    susceptance = per_km("b1_us_per_km", "b", "us_per_km") * 1e-6  # microsiemens
+    susceptance = per_km("b1_us_per_km", "b", "us_per_km") / 1e6  # microsiemens
     if not susceptance:
-        farad = per_km("charging_uf_per_km", "", "") * 1e-6  # microfarad
+        farad = per_km("charging_uf_per_km", "", "") / 1e6  # microfarad
         susceptance = 2 * math.pi * hertz * farad
     return complex(total["r"], total["x"]), susceptance * length
 
