@@ -12,7 +12,9 @@ import pytest
 from feederhost.errors import UsageError
 from feederhost.schema import Answer, Criterion, Proof
 from feederhost.study.options import Options
+from feederhost.study.queue import answers as answers_room
 from feederhost.study.queue.answers import Answered, Bench, answer, judge, set_up
+from feederhost.study.queue.sheets import lay_out
 from feederhost.study.queue.stops import least_slack
 
 from engine import answer as hosted
@@ -316,6 +318,26 @@ def test_a_request_on_one_phase_is_not_judged_as_if_it_had_three():
     assert one.answer is Answer.DATA_FAULT
     assert "on phase B alone" in one.site.fault
     assert three.answer is not Answer.DATA_FAULT
+
+
+def test_one_single_phase_row_makes_the_whole_site_a_fault():
+    _, (site,) = run(feeder(ask("Q1", "A", 10), ask("Q1", "A", 10, "storage", phases="B")))
+    assert site.answer is Answer.DATA_FAULT
+    assert "on phase B alone" in site.site.fault
+
+
+@pytest.mark.parametrize("kw_asked", [10, 40_000])
+def test_an_answer_that_fails_its_ac_check_promises_nothing(monkeypatch, kw_asked):
+    bench = set_up(load(feeder(ask("Q1", "A", kw_asked))), Options())
+    monkeypatch.setattr(answers_room, "least_slack", lambda *_: np.array([-1.0, -1.0]))
+    own = answer(bench, 0, [])
+    assert (own.answer, own.proof) == (Answer.DOES_NOT_FIT, Proof.FAILED)
+    assert math.isnan(own.fits)
+    assert own.remedies == ()
+    assert own.reserved == 0.0
+    page = lay_out(bench.line, own, "")
+    shown = page.request | page.queue
+    assert [k for k in ("fits_kw", "remedy_kw", "head_room_kw") if shown.get(k) is not None] == []
 
 
 def test_a_queue_without_requests_is_refused():

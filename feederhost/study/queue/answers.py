@@ -172,7 +172,10 @@ def judge(line: Line, prover: Prover, at: int, sizes: Mapping[int, float]) -> An
     # A request that finds a limit broken by the queue before it starts fits at nothing.
     holds = slack[0] >= -settings.rounding_slack or fits == 0
     if not holds or (not whole and slack[1] >= 0):
-        return replace(answered, proof=Proof.FAILED, fits=math.nan)
+        # No word that promises anything may stand beside a number that AC does not confirm.
+        return replace(
+            answered, answer=Answer.DOES_NOT_FIT, proof=Proof.FAILED, fits=math.nan, value=math.nan
+        )
     return answered
 
 
@@ -202,7 +205,11 @@ def open_screens(screens: tuple[Screen, ...]) -> tuple[Screen, ...]:
 
 
 def _short(judged: Answered) -> bool:
-    return judged.answer in (Answer.FITS_UP_TO, Answer.DOES_NOT_FIT)
+    """Whether remedies are looked for; not where the answer itself failed its AC check."""
+    return judged.proof is not Proof.FAILED and judged.answer in (
+        Answer.FITS_UP_TO,
+        Answer.DOES_NOT_FIT,
+    )
 
 
 def _carries(remedy: Remedy, site: Site, feeder: Feeder) -> bool:

@@ -161,13 +161,19 @@ def _site(
         received=_received(rows),
         node=numbers.get(nodes[0], -1),
         node_name=nodes[0],
-        phases=rows[0][1]["phases"],
+        phases=_phases(rows),
         parts=parts,
         export_limit=_least(rows, "export_limit_kw", feeder),
         inverter=_least(rows, "inverter_kva", feeder),
         flags=tuple(_flags(name, rows, tables)),
         fault=fault,
     )
+
+
+def _phases(rows: list[tuple[int, dict[str, Any]]]) -> str:
+    """Phases of a site: of the first row that is not on all three, else of the first row."""
+    given = [str(cells["phases"]) for _, cells in rows]
+    return next((p for p in given if p not in ("", "ABC")), given[0])
 
 
 def _least(rows: list[tuple[int, dict[str, Any]]], key: str, feeder: Feeder) -> float:
