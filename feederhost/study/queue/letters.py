@@ -47,10 +47,11 @@ def letter(loaded: Loaded, before: Sequence[Page], page: Page) -> str:
     lines += _pair("asked", f"{size} at node {own['node']}")
     lines += ["", "Answer"]
     answer = Answer(str(own["answer"]))
-    lines += _text(f"{answer}: {_WORDS[answer]}")
     if own["proof"] == Proof.FAILED:
-        lines += _text("No number is given: the AC check of the value did not pass.")
-    elif own.get("fits_kw") is not None:
+        lines += _text(f"{answer}: no size is given, for the AC check did not confirm one.")
+    else:
+        lines += _text(f"{answer}: {_WORDS[answer]}")
+    if own.get("fits_kw") is not None:
         lines += _text(f"Fits without a remedy: {own['fits_kw']:,.1f} kW ({own['proof']}).")
     if own["flags"]:
         lines += _text(f"To know: {own['flags']}.")
